@@ -202,7 +202,7 @@ class ScoreTable:
         if len(self.test) != 16 or len(self.generation) != 4:
             raise InputError("a table has 16 test and 4 generation credits", code="bad-table", field="/table")
         for credit in self.test + self.generation:
-            _number(credit, "/table", -1e9, 64.0)
+            _number(credit, "/table", -1e9, 1e9)
 
 
 @dataclass(frozen=True)
