@@ -48,6 +48,8 @@ def worst_score(score: float, gamma: float, excess: float) -> float:
     def rise(w: float) -> float:
         log_q, slope = _log_power(w, excess)
         q = math.exp(log_q)
+        if q <= w:                     # beyond here even a round that is always won has less than w: no worst strategy lies there
+            return -1e300
         return (1 - gamma) * slope + gamma * (score / w + (1 - score) * (slope * q - 1) / (q - w))
     if rise(_LOW) <= 0:
         return 0.75
