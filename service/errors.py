@@ -2,7 +2,7 @@
 
 Unavailable     nothing is wrong with the request: the service cannot do it now    try again later
 StorageFailed   the disk did not keep what it was asked to keep                    the operator acts; the process stops
-DamagedFile     a stored file was changed, cut or extended since it was written    restore it; nothing read from it counts
+DamagedFile     a stored file was changed, cut or extended since it was written    restore it, nothing read counts
 KeyErased       the run's key is gone, and with it everything encrypted under it   nobody: this is the promise
 """
 

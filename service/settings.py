@@ -37,11 +37,14 @@ class ServiceSettings:
     segments_per_run: int = _setting(100_000, "most segments of one run", low=1, high=10_000_000)
     run_rounds: int = _setting(2**40, "most rounds a declaration may name", unit="rounds", low=1, high=2**50)
     document_bytes: int = _setting(1_000_000, "largest JSON body", unit="bytes", low=1024, high=100_000_000)
-    upload_chunk_timeout_s: float = _setting(30.0, "longest wait for the next piece of an upload", unit="s", low=0.1, high=3600)
-    uploads_at_once: int = _setting(16, "uploads received at the same time; further ones are asked to come back", low=1, high=1024)
+    upload_chunk_timeout_s: float = _setting(30.0, "longest wait for the next piece of an upload",
+                                             unit="s", low=0.1, high=3600)
+    uploads_at_once: int = _setting(16, "uploads received at the same time; further ones are asked to come back",
+                                    low=1, high=1024)
     connections: int = _setting(512, "connections served at the same time", low=1, high=65536)
     page_items: int = _setting(200, "most items of one page of a list", low=1, high=10_000)
-    idempotency_keep_s: float = _setting(86_400.0, "how long answers to an Idempotency-Key are kept", unit="s", low=60, high=31_536_000)
+    idempotency_keep_s: float = _setting(86_400.0, "how long answers to an Idempotency-Key are kept",
+                                         unit="s", low=60, high=31_536_000)
     event_poll_s: float = _setting(0.5, "how often an event stream looks for news", unit="s", low=0.01, high=60)
     event_keepalive_s: float = _setting(15.0, "longest silence of an event stream", unit="s", low=1, high=600)
 
@@ -50,18 +53,24 @@ class ServiceSettings:
     heartbeat_s: float = _setting(5.0, "how often a worker extends its lease", unit="s", low=0.1, high=1200)
     poll_s: float = _setting(1.0, "how often an idle worker looks for a run", unit="s", low=0.01, high=600)
     attempts: int = _setting(5, "claims of a run without progress before it is called failed", low=1, high=1000)
-    retry_wait_s: float = _setting(5.0, "wait before a run is tried again, doubled each time", unit="s", low=0, high=3600)
+    retry_wait_s: float = _setting(5.0, "wait before a run is tried again, doubled each time",
+                                   unit="s", low=0, high=3600)
     hash_threads: int = _setting(0, "threads of the hash; 0 = one per processor", low=0, high=1024)
-    partial_rounds: int = _setting(2**25, "rounds between two stored partial hashes", unit="rounds", low=2**20, high=2**40)
-    stop_s: float = _setting(20.0, "time granted to work in hand when the service is stopped", unit="s", low=0, high=3600)
+    partial_rounds: int = _setting(2**25, "rounds between two stored partial hashes",
+                                   unit="rounds", low=2**20, high=2**40)
+    stop_s: float = _setting(20.0, "time granted to work in hand when the service is stopped",
+                             unit="s", low=0, high=3600)
 
     free_disk_bytes: int = _setting(2**30, "space left free on the data disk; uploads that would go below are refused",
                                     unit="bytes", low=0, high=2**50)
     store_wait_s: float = _setting(30.0, "longest wait for another writer of the database", unit="s", low=0.1, high=600)
-    ledger_origin: str = _setting("bellassay/ledger", "name of the ledger, part of every signed checkpoint; never change it later")
+    ledger_origin: str = _setting("bellassay/ledger",
+                                  "name of the ledger, part of every signed checkpoint; never change it later")
     master_key_file: Path | None = _setting(None, "file of the master key; default: keys/master.key in the data folder")
-    ledger_key_file: Path | None = _setting(None, "file of the ledger's signing key; default: keys/ledger.key in the data folder")
-    token_days: float = _setting(365.0, "life of a new token unless said otherwise", unit="days", low=0.001, high=36_500)
+    ledger_key_file: Path | None = _setting(
+        None, "file of the ledger's signing key; default: keys/ledger.key in the data folder")
+    token_days: float = _setting(365.0, "life of a new token unless said otherwise",
+                                 unit="days", low=0.001, high=36_500)
     log_level: str = _setting("info", "debug, info, warning or error")
 
     def __post_init__(self) -> None:
@@ -133,7 +142,7 @@ def setting_rows() -> list[dict[str, str]]:
 
 
 def _bad(name: str, why: str) -> InputError:
-    return InputError(f"setting {name}: {why}", code="bad-setting", field=name.split(" ")[0])
+    return InputError(f"setting {name}: {why}", code="bad-setting")
 
 
 def _read(item: dataclasses.Field, value: Any, name: str) -> Any:

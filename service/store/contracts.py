@@ -186,12 +186,13 @@ class Reading(Protocol):
     def list_tokens(self) -> list[TokenRow]: ...
 
     def get_declaration(self, declaration_id: str) -> DeclarationRow | None: ...
-    def list_declarations(self, owner: str | None = None, *, before: int | None = None, limit: int = 50) -> list[DeclarationRow]:
+    def list_declarations(self, owner: str | None = None, *, before: int | None = None,
+                          limit: int = 50) -> list[DeclarationRow]:
         """Newest first; `owner` None = of everybody; `before` = the smallest `number` of the page before."""
 
     def get_run(self, run_id: str) -> RunRow | None: ...
-    def list_runs(self, owner: str | None = None, *, states: Sequence[str] | None = None, declaration_id: str | None = None,
-                  before: int | None = None, limit: int = 50) -> list[RunRow]:
+    def list_runs(self, owner: str | None = None, *, states: Sequence[str] | None = None,
+                  declaration_id: str | None = None, before: int | None = None, limit: int = 50) -> list[RunRow]:
         """Newest first; pages like `list_declarations`."""
     def count_runs(self, owner: str | None = None) -> dict[str, int]:
         """Number of runs per state; every state is a key."""

@@ -1,9 +1,9 @@
 """Who holds a lease, and whether that process can still be alive.
 
 A worker id is "host:boot:pid namespace:pid:start": the boot id and the pid namespace together say which table of
-processes the pid belongs to, and the start time (clock ticks since boot) tells a reused pid apart. Only a process of the
-same boot and the same namespace is ever called dead: of another machine, another container or another boot nothing can
-be known here, and its lease has to run out.
+processes the pid belongs to, and the start time (clock ticks since boot) tells a reused pid apart. Only a process of
+the same boot and the same namespace is ever called dead: of another machine, another container or another boot nothing
+can be known here, and its lease has to run out.
 """
 
 from __future__ import annotations
