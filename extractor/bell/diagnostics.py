@@ -120,7 +120,7 @@ def _test_fraction(tally: Tally, settings: Settings) -> Diagnostic:
 
 def _no_signalling(tally: Tally) -> Diagnostic:
     """Four comparisons: the chance of outcome 1 at one station for its setting, with the other's setting 0 against 1."""
-    counts, worst, gap, where = tally.test_counts(), 0.0, 0.0, "a at x = 0"
+    counts, worst, gap, where = tally.test_counts(), math.inf, 0.0, "a at x = 0"
     for side, own in ((side, own) for side in "ab" for own in (0, 1)):
         ones, totals = [], []
         for other in (0, 1):
@@ -133,7 +133,7 @@ def _no_signalling(tally: Tally) -> Diagnostic:
         if log < worst:
             worst, gap = log, ones[0] / totals[0] - ones[1] / totals[1]
             where = f"{side} at {'x' if side == 'a' else 'y'} = {own}"
-    return Diagnostic("no-signalling", abs(gap), as_p_value(worst), False,
+    return Diagnostic("no-signalling", abs(gap), as_p_value(min(0.0, worst)), False,
                       f"The largest change of one station's outcomes with the other's setting is {abs(gap):.2g}, for {where}.")
 
 
