@@ -13,7 +13,7 @@ from extractor.entropy import bound, lengths, search
 from extractor.entropy.numerics import down, exactly, number
 from extractor.entropy.single_round import von_neumann
 from extractor.model import (
-    METHODS, SETTING_PAIRS, Acceptance, Convention, Declaration, Settings, Tally, cell_index,
+    METHODS, SETTING_PAIRS, Acceptance, Convention, Declaration, ScoreTable, Settings, Tally, cell_index,
 )
 
 
@@ -156,6 +156,8 @@ def _draft(common: dict[str, Any], output_rule: str, order: float | None, confid
     settings: Settings = common["settings"]
     n, score, gamma = common["rounds"], common["expected_score"], settings.test_probability
     shell = dict(common, output_rule=output_rule, output_bits=2 * n)
+    if order is not None:
+        ScoreTable(order, (0.0,) * 16, (0.0,) * 4)      # checks the range of a given order before anything divides by order - 1
     # Field checks first, with a harmless order, so that the search below only ever sees sane numbers.
     convention = common.get("convention", Convention())
     if common["method"] == "factor-closed":
