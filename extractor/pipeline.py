@@ -2,7 +2,7 @@
 
     round files --open--> batches --tally--> tally --certify--> certificate --extract (with a seed)--> bits
 
-`declare` comes before the rounds exist, `plan` before that; `read_run` and `run_offline` put the steps together for files on disk.
+`declare` comes before the rounds exist, `plan` before that.
 Each step takes frozen values and returns frozen values; nothing here waits, stores, or holds a key.
 """
 
@@ -18,7 +18,7 @@ from extractor.bell.score import Score, score
 from extractor.documents import tally_counts
 from extractor.entropy import bound, planning
 from extractor.errors import Defect, InputError
-from extractor.hashing.toeplitz import SeedReader, ToeplitzStream
+from extractor.hashing.toeplitz import SeedReader, ToeplitzStream, find_backend
 from extractor.model import Certificate, Declaration, RoundBatch, RoundRules, Tally
 from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, rebatch
 from extractor.records.rounds import open_rounds
@@ -44,16 +44,6 @@ def declare(*, calibration: Tally | None = None, score: float | None = None, **a
     return planning.declare(
         score=planning.score_of(calibration, **known), calibration_digest=canonical.digest(tally_counts(calibration)),
         calibration_rounds=calibration.rounds, **arguments)
-
-
-@dataclass(frozen=True)
-class RecordedRun:
-    """What reading a run's files established. digest: of all rounds as one, whatever files they came in."""
-
-    rounds: int
-    tally: Tally
-    digest: str
-    no_clicks: tuple[int, int]
 
 
 def batches_of(files: Iterable[tuple[BinaryIO, str]], rules: RoundRules) -> Iterator[RoundBatch]:
@@ -85,7 +75,7 @@ def read_run(batches: Iterable[RoundBatch], on_rounds: Callable[[int], None] | N
 
 def look(declaration: Declaration, tally: Tally, calibration: Tally | None = None) -> tuple[Score, tuple[Diagnostic, ...]]:
     """Score and diagnostics of a tally under its declaration: for people to read; neither certifies anything."""
-    return (score(tally, declaration.convention, declaration.settings),
+    return (score(tally, declaration.convention, declaration.settings, declaration.no_click),
             diagnose(tally, declaration.convention, declaration.settings, calibration))
 
 
@@ -100,7 +90,7 @@ class PartialHash:
 def extract(declaration: Declaration, certificate: Certificate, batches_from: Callable[[int], Iterable[RoundBatch]],
             seed: SeedReader, *, resume: PartialHash | None = None, on_partial: Callable[[PartialHash], None] | None = None,
             partial_every_rounds: int = 2**25, on_progress: Callable[[int, int], None] | None = None,
-            backend: str | None = None) -> bytes:
+            backend: str | None = None, threads: int = 1) -> bytes:
     """The certified bits: Toeplitz hash of the run's raw string a_1 … a_N b_1 … b_N, N the declared rounds, zero padded.
 
     batches_from(k) yields the run's rounds from round k on (k a multiple of BLOCK_ROUNDS), in batches of BLOCK_ROUNDS.
@@ -117,7 +107,7 @@ def extract(declaration: Declaration, certificate: Certificate, batches_from: Ca
     if done % BLOCK_ROUNDS and done != certificate.rounds:
         raise Defect(f"a partial hash ends at round {done}, not at a block's end")
     total = bytearray(resume.bits if resume else bytes((m + 7) // 8))
-    streams = {name: ToeplitzStream(n, m, seed, start=start + done, backend=backend)
+    streams = {name: ToeplitzStream(n, m, seed, start=start + done, backend=backend, threads=threads)
                for name, start in (("a", 0), ("b", declaration.rounds))}
     since = 0
     for batch in (batches_from(done) if done < certificate.rounds else ()):
@@ -145,5 +135,4 @@ def _fold(total: bytearray, streams: dict[str, ToeplitzStream]) -> None:
 
 def backend_name(backend: str | None = None) -> str:
     """Name of the hashing backend that `extract` uses when asked for `backend`."""
-    from extractor.hashing import toeplitz
-    return toeplitz.pick(backend).name
+    return find_backend(backend).name
