@@ -135,7 +135,7 @@ class FourierEngine:
         plan, transform = self.plan, self._transform
 
         def spectrum(bits: np.ndarray) -> np.ndarray:
-            out = np.empty(transform.spectrum_shape, dtype=complex)
+            out = np.zeros(transform.spectrum_shape, dtype=complex)    # the padding stays zero
             transform.forward(bits, out)
             return out
 

@@ -85,7 +85,7 @@ def _cost_ns(plan: Plan, raw_bits: int) -> float:
         forward, inverse, products = 2 * blocks + groups * (plan.tiles - 1), groups * plan.tiles, blocks * plan.tiles
     each = _NS_SHORT if plan.points <= 1 << 15 else _NS_MIDDLE if plan.points <= LONGEST_SHORT_POINTS else _NS_LONG
     per_point = each * (forward + 1.5 * inverse) + _NS_PRODUCT * products
-    batch = max(1, (1 << 17) // plan.points)
+    batch = max(2, (1 << 17) // plan.points) if plan.points <= LONGEST_SHORT_POINTS else 1
     return plan.points * (per_point + each) + _NS_PER_CALL * (blocks / batch + inverse)
 
 

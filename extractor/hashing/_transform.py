@@ -4,8 +4,8 @@ A spectrum is a complex128 array of `spectrum_shape`. Its order is private to th
 spectra of the same transform, and sums of those, mean anything.
 
 Long transforms are split by hand. One monolithic real transform of 2^22 points leaves every cache and takes
-two to three times as long per point as short ones; scipy also runs several short ones in vector registers and, asked to,
-in several threads, but never a single one. With N = K·C points, index j = C·j1 + j2 and frequency k = k1 + K·k2,
+two to three times as long per point as short ones, and scipy uses vector registers (and threads) only across several
+transforms, never within one. With N = K·C points, index j = C·j1 + j2 and frequency k = k1 + K·k2,
 
     X[k1 + K·k2] = sum_j2  w_C^(j2·k2) · ( w_N^(j2·k1) · sum_j1  w_K^(j1·k1) x[C·j1 + j2] ),   w_M = exp(-2 pi i / M)
 
@@ -14,6 +14,9 @@ transforms of C points along the rows. Real input makes rows k1 and K - k1 conju
 """
 
 from __future__ import annotations
+
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 import scipy.fft
@@ -26,6 +29,11 @@ _PAD = 8                            # extra columns: rows a power of two apart w
 def split_columns(points: int) -> int:
     """C of a long transform: rows short enough for the cache, columns not much longer than rows."""
     return 1 << 12 if points <= 1 << 21 else 1 << 13
+
+
+def _slices(count: int, step: int) -> list[slice]:
+    """0 … count - 1 cut into slices of `step`, the last one shorter."""
+    return [slice(first, min(first + step, count)) for first in range(0, count, step)]
 
 
 def keep_freed_memory() -> None:
@@ -43,7 +51,7 @@ class ShortTransform:
 
     def __init__(self, points: int, threads: int) -> None:
         self.points, self._threads = points, threads
-        self.batch = max(1, (1 << 17) // points)
+        self.batch = max(2, (1 << 17) // points)
         self.spectrum_shape = (points // 2 + 1,)
         self._real = np.zeros((self.batch, points))
 
@@ -75,41 +83,64 @@ class ShortTransform:
 
 
 class LongTransform:
-    """One real transform at a time, split into K rows of C points (module docstring)."""
+    """One real transform at a time, split into K rows of C points (module docstring); `columns` C >= 64 is for tests."""
 
     batch = 1
 
-    def __init__(self, points: int, threads: int) -> None:
+    def __init__(self, points: int, threads: int, columns: int | None = None) -> None:
         self.points, self._threads = points, threads
-        self._columns = columns = split_columns(points)
+        self._columns = columns = columns or split_columns(points)
         self._rows = points // columns
         kept = self._rows // 2 + 1
         self.spectrum_shape = (kept, columns + _PAD)
         self._real = np.zeros((self._rows, columns + _PAD))
-        self._bytes = np.zeros(points, dtype=np.uint8)
         self._spare: list[np.ndarray] = []
-        # at least two slices of work per thread: scipy shares whole transforms out among its workers
-        self._column_step = max(16, threads * _SLICE_POINTS // self._rows)
-        self._row_step = max(2, threads * _SLICE_POINTS // 2 // columns)
+        self._pool = ThreadPoolExecutor(threads) if threads > 1 else None
+        self._column_slices = _slices(columns, max(16, _SLICE_POINTS // self._rows))
+        self._row_slices = _slices(kept, max(2, _SLICE_POINTS // 2 // columns))
+        self._fill_slices = _slices(self._rows, max(1, _SLICE_POINTS // columns))
         # w_N^(k1·j2) with j2 = 64 h + l as the product of two short tables: error below 6 units in the last place
         k1 = np.arange(kept)[:, np.newaxis]
         coarse = np.exp(-2j * np.pi / points * (k1 * np.arange(0, columns, 64) % points))
         fine = np.exp(-2j * np.pi / points * (k1 * np.arange(64) % points))
         self._factors = (coarse[:, :, np.newaxis] * fine[:, np.newaxis, :]).reshape(kept, columns)
 
+    def _each(self, work: Callable[[slice], None], slices: list[slice]) -> None:
+        """Do `work` for every slice; the slices are independent, so each thread gets a contiguous share of them."""
+        def run(share: list[slice]) -> None:
+            for part in share:
+                work(part)
+
+        if self._pool is None:
+            run(slices)
+        else:
+            size = -(-len(slices) // self._threads)
+            for done in [self._pool.submit(run, slices[k:k + size]) for k in range(0, len(slices), size)]:
+                done.result()
+
     def forward(self, bits: np.ndarray, out: np.ndarray) -> None:
         """Spectrum of the bits, uint8 (w,), w <= points, zeros behind them, into `out`."""
-        width, columns = len(bits), self._columns
-        self._bytes[:width] = bits
-        self._bytes[width:] = 0
-        self._real[:, :columns] = self._bytes.reshape(self._rows, columns)
-        for c in range(0, columns, self._column_step):
-            part = slice(c, min(c + self._column_step, columns))
-            out[:, part] = scipy.fft.rfft(self._real[:, part], axis=0, workers=self._threads)
-        for r in range(0, len(out), self._row_step):
-            part = slice(r, r + self._row_step)
+        real, columns = self._real, self._columns
+
+        def fill(part: slice) -> None:
+            here = bits[part.start * columns:part.stop * columns]
+            full, rest = divmod(len(here), columns)
+            rows = real[part, :columns]
+            rows[:full] = here[:full * columns].reshape(full, columns)
+            rows[full:] = 0.0
+            if rest:
+                rows[full, :rest] = here[full * columns:]
+
+        def down_columns(part: slice) -> None:
+            out[:, part] = scipy.fft.rfft(real[:, part], axis=0)
+
+        def along_rows(part: slice) -> None:
             row = out[part, :columns] * self._factors[part]
-            out[part, :columns] = scipy.fft.fft(row, axis=1, overwrite_x=True, workers=self._threads)
+            out[part, :columns] = scipy.fft.fft(row, axis=1, overwrite_x=True)
+
+        self._each(fill, self._fill_slices)
+        self._each(down_columns, self._column_slices)
+        self._each(along_rows, self._row_slices)
 
     def add_products(self, total: np.ndarray, left: np.ndarray, right: np.ndarray) -> None:
         """total += spectrum(left[0])·spectrum(right[0]); uint8 (1, w) arrays."""
@@ -121,21 +152,25 @@ class LongTransform:
 
     def add_product(self, total: np.ndarray, left: np.ndarray, right: np.ndarray) -> None:
         """total += left·right for three spectra."""
-        for r in range(0, len(total), self._row_step):
-            part = slice(r, r + self._row_step)
+        def add(part: slice) -> None:
             total[part] += left[part] * right[part]
+
+        self._each(add, self._row_slices)
 
     def inverse(self, spectrum: np.ndarray) -> np.ndarray:
         """The real values, float64 (points,), whose spectrum this is; destroys `spectrum`."""
-        columns = self._columns
-        for r in range(0, len(spectrum), self._row_step):
-            part = slice(r, r + self._row_step)
-            row = scipy.fft.ifft(spectrum[part, :columns], axis=1, workers=self._threads)
+        real, columns = self._real, self._columns
+
+        def along_rows(part: slice) -> None:
+            row = scipy.fft.ifft(spectrum[part, :columns], axis=1)
             np.multiply(row, np.conj(self._factors[part]), out=spectrum[part, :columns])
-        for c in range(0, columns, self._column_step):
-            part = slice(c, min(c + self._column_step, columns))
-            self._real[:, part] = scipy.fft.irfft(spectrum[:, part], self._rows, axis=0, workers=self._threads)
-        return self._real[:, :columns].reshape(self.points)
+
+        def down_columns(part: slice) -> None:
+            real[:, part] = scipy.fft.irfft(spectrum[:, part], self._rows, axis=0)
+
+        self._each(along_rows, self._row_slices)
+        self._each(down_columns, self._column_slices)
+        return real[:, :columns].reshape(self.points)
 
 
 def make_transform(points: int, threads: int = 1) -> ShortTransform | LongTransform:
