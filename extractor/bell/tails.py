@@ -20,7 +20,8 @@ def log_at_least(count: int, trials: int, chance: float) -> float:
         return 0.0
     if count > trials:
         return -math.inf
-    tail = float(stats.binom.sf(count - 1, trials, chance))
+    # The incomplete beta function is scipy.stats.binom.sf(count - 1, ...) to the last bit, without its overhead.
+    tail = float(special.betainc(count, trials - count + 1, chance))
     if tail > _DIRECT:
         return min(0.0, math.log(tail))
     return min(0.0, _log_far_tail(count, trials, chance))
@@ -34,10 +35,9 @@ def log_at_most(count: int, trials: int, chance: float) -> float:
 def _log_far_tail(count: int, trials: int, chance: float) -> float:
     """Upper bound on the tail far above the mean: the first term times a geometric series.
 
-    First term by Stirling's formula with its standard bounds n! < sqrt(2 pi n) (n/e)^n e^(1/12n) and
-    n! > sqrt(2 pi n) (n/e)^n; its exponent -n D(count/n || chance) in the form of deviations from the mean, because the
-    textbook form with three log-factorials loses all digits at n = 1e10. The ratio of successive terms falls, so 1/(1 - first ratio)
-    bounds the rest.
+    First term by Stirling's formula with the bounds e^(1/(12n+1)) < n! / (sqrt(2 pi n) (n/e)^n) < e^(1/12n) (Robbins 1955);
+    its exponent -n D(count/n || chance) in the form of deviations from the mean, because the textbook form with three
+    log-factorials loses all digits at n = 1e10. The ratio of successive terms falls, so 1/(1 - first ratio) bounds the rest.
     """
     if count == trials:
         return trials * math.log(chance)
@@ -45,7 +45,8 @@ def _log_far_tail(count: int, trials: int, chance: float) -> float:
     hits, misses = trials * chance, trials * (1.0 - chance)
     deviation = count - hits
     exponent = -hits * _excess(deviation / hits) - misses * _excess(-deviation / misses)
-    first = exponent + 0.5 * math.log(trials / (2.0 * math.pi * count) / rest) + 1.0 / (12.0 * trials)
+    first = exponent + 0.5 * math.log(trials / (2.0 * math.pi * count) / rest)
+    first += 1.0 / (12.0 * trials) - 1.0 / (12.0 * count + 1.0) - 1.0 / (12.0 * rest + 1.0)
     ratio = rest * chance / ((count + 1.0) * (1.0 - chance))
     return first - math.log1p(-ratio)
 
