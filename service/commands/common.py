@@ -1,0 +1,225 @@
+"""What all commands share: the look of the help, option types, reading and writing of files, output and progress.
+
+Results go to stdout (one JSON object with --json), everything else to stderr.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import sys
+import textwrap
+import time
+from collections.abc import Callable, Iterable
+from pathlib import Path
+from types import TracebackType
+from typing import Any
+
+from extractor.errors import InputError
+
+DONE, REFUSED, BAD_INPUT = 0, 1, 2
+WIDTH = 80
+LARGEST_DOCUMENT_BYTES = 64 << 20
+SPARSE_LINE_S = 10.0                     # between progress lines when stderr is not a terminal
+
+
+class _Help(argparse.RawDescriptionHelpFormatter):
+    def __init__(self, prog: str) -> None:
+        super().__init__(prog, max_help_position=26, width=WIDTH - 2)
+
+
+class Parser(argparse.ArgumentParser):
+    """Options are never guessed from their first letters: a script must not change meaning with a new option."""
+
+    def __init__(self, **options: Any) -> None:
+        super().__init__(formatter_class=_Help, allow_abbrev=False, **options)
+
+
+def add_command(commands: Any, name: str, run: Callable[[argparse.Namespace], int], summary: str, paragraph: str,
+                example: str, *, prints_result: bool = True) -> Parser:
+    """A command with one paragraph and an example in its --help."""
+    text = textwrap.fill(" ".join(paragraph.split()), WIDTH - 2)
+    lines = "\n".join("  " + line for line in textwrap.dedent(example).strip().splitlines())
+    parser = commands.add_parser(name, help=summary, description=text, epilog=f"example:\n{lines}")
+    parser.set_defaults(run=run)
+    if prints_result:
+        parser.add_argument("--json", action="store_true", help="print one JSON object on standard output, all else on standard error")
+    return parser
+
+
+# ---- option types
+
+def whole(text: str) -> int:
+    """A whole number, also written as 1e8."""
+    try:
+        return int(text.replace("_", ""))
+    except ValueError:
+        pass
+    try:
+        value = float(text)
+    except ValueError:
+        value = float("nan")
+    if not (value == value and abs(value) < 2**53 and value == int(value)):
+        raise argparse.ArgumentTypeError(f"{text!r} is not a whole number")
+    return int(value)
+
+
+def real(text: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        value = float("nan")
+    if value != value or value in (float("inf"), float("-inf")):
+        raise argparse.ArgumentTypeError(f"{text!r} is not a number")
+    return value
+
+
+def setting_pair(text: str) -> tuple[int, int]:
+    if text not in ("00", "01", "10", "11"):
+        raise argparse.ArgumentTypeError(f"{text!r} is none of 00, 01, 10, 11")
+    return int(text[0]), int(text[1])
+
+
+def four_probabilities(text: str) -> tuple[float, float, float, float]:
+    parts = text.split(",")
+    if len(parts) != 4:
+        raise argparse.ArgumentTypeError(f"{text!r} is not four numbers such as 0.25,0.25,0.25,0.25")
+    return tuple(real(part) for part in parts)  # type: ignore[return-value]
+
+
+# ---- files
+
+def read_bytes(path: str | Path, largest: int = LARGEST_DOCUMENT_BYTES) -> bytes:
+    """A whole small file. Errors raised: InputError if it is larger than it can sensibly be; OSError."""
+    with open(path, "rb") as file:
+        data = file.read(largest + 1)
+    if len(data) > largest:
+        raise InputError(f"is larger than {largest >> 20} MiB", code="too-large", file=str(path))
+    return data
+
+
+def read_json(path: str | Path) -> Any:
+    """The JSON value in a file; duplicate names and values such as NaN are refused."""
+    from extractor.seal import canonical
+
+    try:
+        return canonical.parse(read_bytes(path))
+    except InputError as fault:
+        raise InputError(fault.message, code=fault.code, file=fault.file or str(path), row=fault.row, field=fault.field) from None
+
+
+def read_declaration(path: str | Path) -> Any:
+    """The declaration in a JSON file."""
+    from extractor.documents import declaration_from
+
+    try:
+        return declaration_from(read_json(path))
+    except InputError as fault:
+        raise InputError(fault.message, code=fault.code, file=fault.file or str(path), row=fault.row, field=fault.field) from None
+
+
+def write_file(path: Path, data: bytes, *, secret: bool = False, replace: bool = True) -> None:
+    """Write a file whole or not at all. With replace=False an existing file is an InputError."""
+    if not replace and path.exists():
+        raise InputError("exists already; choose another place or move it away", code="file-exists", file=str(path))
+    part = path.with_name(path.name + ".part")
+    try:
+        with os.fdopen(os.open(part, os.O_WRONLY | os.O_CREAT | os.O_TRUNC, 0o600 if secret else 0o666), "wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(part, path)
+    except BaseException:
+        part.unlink(missing_ok=True)
+        raise
+
+
+def json_bytes(document: Any) -> bytes:
+    return (json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False) + "\n").encode()
+
+
+# ---- output
+
+def note(text: str = "") -> None:
+    """A remark for the person at the terminal."""
+    print(text, file=sys.stderr, flush=True)
+
+
+def emit(args: argparse.Namespace, document: Any, lines: Iterable[str]) -> None:
+    """The result of a command: the document with --json, the lines otherwise."""
+    if args.json:
+        print(json.dumps(document, ensure_ascii=False, allow_nan=False), flush=True)
+    else:
+        for line in lines:
+            print(line, flush=True)
+
+
+def rows(pairs: Iterable[tuple[str, object]]) -> list[str]:
+    """Names and values as aligned lines of at most 80 columns; long values wrapped, digests on a line of their own."""
+    pairs = [(name, str(value)) for name, value in pairs]
+    width = max((len(name) for name, _ in pairs), default=0) + 2
+    lines: list[str] = []
+    for name, value in pairs:
+        if " " not in value and len(value) > WIDTH - width:
+            lines += [name, f"  {value}"]
+            continue
+        parts = textwrap.wrap(value, WIDTH - width, break_long_words=False, break_on_hyphens=False) or [""]
+        lines += [f"{name:<{width}}{parts[0]}", *(" " * width + more for more in parts[1:])]
+    return lines
+
+
+def bullets(sentences: Iterable[str]) -> list[str]:
+    """Sentences as an indented list."""
+    return [line for sentence in sentences
+            for line in textwrap.wrap(sentence, WIDTH, initial_indent="  - ", subsequent_indent="    ", break_on_hyphens=False)]
+
+
+def grouped(number: int) -> str:
+    """A whole number with thin gaps for reading: 12 345 678."""
+    return f"{number:,}".replace(",", " ")
+
+
+def duration(seconds: float) -> str:
+    """12.3 s, 4 min 5 s, 3 h 10 min."""
+    if seconds < 60:
+        return f"{seconds:.1f} s"
+    minutes, rest = divmod(round(seconds), 60)
+    return f"{minutes} min {rest} s" if minutes < 60 else f"{minutes // 60} h {minutes % 60} min"
+
+
+class Progress:
+    """A progress bar on a terminal; elsewhere a line on stderr every ten seconds, none if it is over before.
+
+    total  in `unit` ("B" is scaled to kB, MB, ...), None if unknown
+    """
+
+    def __init__(self, label: str, total: int | None, unit: str, clock: Callable[[], float] = time.monotonic) -> None:
+        self._label, self._total, self._unit, self._clock = label, total, unit, clock
+        self._begin = self._said = clock()
+        self._at = 0
+        self._bar = None
+        if sys.stderr.isatty():
+            from tqdm import tqdm
+
+            self._bar = tqdm(total=total, desc=label, unit=unit, unit_scale=True, ncols=WIDTH - 1, leave=True, file=sys.stderr)
+
+    def advance(self, amount: int) -> None:
+        self._at += amount
+        if self._bar is not None:
+            self._bar.update(amount)
+        elif self._clock() - self._said >= SPARSE_LINE_S:
+            self._said = self._clock()
+            part = f"{100 * self._at / self._total:.0f} %" if self._total else f"{self._at:.3g} {self._unit}"
+            rate = self._at / max(self._said - self._begin, 1e-9)
+            note(f"{self._label}: {part}, {rate:.3g} {self._unit}/s")
+
+    def move_to(self, place: int) -> None:
+        self.advance(place - self._at)
+
+    def __enter__(self) -> Progress:
+        return self
+
+    def __exit__(self, kind: type[BaseException] | None, fault: BaseException | None, trace: TracebackType | None) -> None:
+        if self._bar is not None:
+            self._bar.close()
