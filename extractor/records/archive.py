@@ -86,7 +86,7 @@ def _directory(file: BinaryIO, size: int, intake: Intake) -> tuple[list[_Entry],
     tail = _bytes_at(file, max(0, size - _END.size), _END.size)
     if len(tail) != _END.size or not tail.startswith(END_MARK):
         last = _bytes_at(file, max(0, size - 2**16 - _END.size), 2**16 + _END.size)
-        if END_MARK in last:
+        if END_MARK in last[: -_END.size + len(END_MARK)]:
             raise intake.fault("has bytes, or a comment, after the end of the archive", "bytes-after-end")
         raise intake.fault("is a zip archive without its end: it was cut", "truncated-file")
     _, disk, start_disk, here, count, length, offset, comment = _END.unpack(tail)

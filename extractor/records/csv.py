@@ -15,7 +15,7 @@ besides those of `intake`.
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import BinaryIO
+from typing import BinaryIO, NoReturn
 
 import numpy as np
 
@@ -103,8 +103,8 @@ class _Reader:
         digits = 0
         if self._next is not None:
             if self._next >= ROUND_NUMBER_LIMIT:
-                raise self._intake.fault("the round numbers go beyond 10^18 - 1", "bad-round-number",
-                                         self._intake.rounds + fill + 1, "round")
+                self._stop(self._intake.fault("the round numbers go beyond 10^18 - 1", "bad-round-number",
+                                              self._intake.rounds + fill + 1, "round"), columns, bits, fill)
             digits = max(self._width, len(str(self._next)))
             rows = min(rows, 10**digits - self._next)
         length = 2 * len(bits) - 1 + len(self._end) + (digits + 1 if digits else 0)
@@ -120,7 +120,7 @@ class _Reader:
         elif short:
             rows -= 1                          # a line that is too short: looked at on its own next time
             if not rows:
-                raise self._explain(self._place, self._intake.rounds + fill + 1)
+                self._stop(self._explain(self._place, self._intake.rounds + fill + 1), columns, bits, fill)
         window = np.frombuffer(data, np.uint8, rows * length)
         expected, mask = self._expected(rows, length, digits)
         differs = window ^ expected
@@ -131,14 +131,17 @@ class _Reader:
             columns[k, fill : fill + good] = table[:, self._offset(name, digits)]
         if good < rows:
             error = self._explain(self._place + good * length, self._intake.rounds + fill + good + 1, good)
-            if fill + good:
-                # a fault in an earlier row that only `intake` sees goes first
-                self._intake.values({name: columns[k, : fill + good] for k, name in enumerate(bits)})
-            raise error
+            self._stop(error, columns, bits, fill + good)
         self._place = min(self._size, self._place + rows * length)
         if self._next is not None:
             self._next += rows
         return rows
+
+    def _stop(self, error: InputError, columns: np.ndarray, bits: list[str], rows: int) -> NoReturn:
+        """Raise `error`, unless one of the `rows` before it has a fault that only `intake` sees: that one goes first."""
+        if rows:
+            self._intake.values({name: columns[k, :rows] for k, name in enumerate(bits)})
+        raise error
 
     def _offset(self, field: str, digits: int) -> int:
         """Where the value of `field` begins within a line."""
@@ -157,7 +160,8 @@ class _Reader:
                 if name != "round":
                     # "0" and "1" differ in the lowest bit, "2" from "0" in the second; "3" is left to `intake`
                     mask[self._offset(name, digits)] = 0xFC if name in ("a", "b") else 0xFE
-            self._lines = np.tile(np.stack((line, mask))[:, None, :], (1, _WINDOW_ROWS, 1))
+            most = min(_WINDOW_ROWS, -(-(self._size - self._place) // length))
+            self._lines = np.tile(np.stack((line, mask))[:, None, :], (1, most, 1))
         lines = self._lines[:, :rows]
         if digits and self._next is not None:
             start = self._offset("round", digits)
