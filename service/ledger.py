@@ -23,6 +23,7 @@ from extractor.errors import Defect, InputError, ProofError
 from extractor.seal import checkpoint as checkpoints
 from extractor.seal import merkle, note
 from extractor.seal.canonical import canonical_bytes
+from service.errors import StorageFailed
 from service.keys import ledger_signer
 from service.store.contracts import LedgerEntryRow, LedgerHeadRow, Reading, Store, Transaction
 from service.store.durable import storage_errors, write_durably
@@ -164,9 +165,11 @@ class Ledger:
                     "restored from an old copy or lost its end. Put the newest database in place. If it is lost for "
                     "good, this ledger cannot be continued: keep the folder for the auditors and start with a new "
                     "data folder and another ledger_origin.", code="ledger-behind")
-            same = merkle.root(size, reading.ledger_nodes) == root
-            if head is not None:
-                same = same and self._opened(head.checkpoint) == (now, merkle.root(now, reading.ledger_nodes))
+            try:
+                same = merkle.root(size, reading.ledger_nodes) == root and (
+                    head is None or self._opened(head.checkpoint) == (now, merkle.root(now, reading.ledger_nodes)))
+            except (ProofError, Defect):            # a head that is not signed, a hash that is missing
+                same = False
         if not same:
             raise InputError(
                 f"the ledger in the database has another history than the checkpoint of {size} entries that was "
@@ -179,8 +182,12 @@ class Ledger:
         """Writes the copy durably, unless one of a larger tree is there already."""
         with self._copy_lock():
             there = _read_copy(self._copy_path)
-            if there is not None and self._opened(there)[0] >= size:
-                return
+            try:
+                if there is not None and self._opened(there)[0] >= size:
+                    return
+            except (ProofError, InputError) as fault:
+                raise StorageFailed(f"{self._copy_path.name} was changed by somebody else: {fault}",
+                                    code="ledger-copy-changed") from None
             write_durably(self._copy_path, signed.encode(), 0o600)
 
     @contextmanager
@@ -197,7 +204,8 @@ class Ledger:
 
 def _read_copy(path: Path) -> str | None:
     try:
-        return path.read_text(encoding="utf-8", errors="replace")       # damage is found by the signature
+        with storage_errors(path):
+            return path.read_bytes().decode("utf-8", "replace")     # damage is found by the signature
     except FileNotFoundError:
         return None
 

@@ -150,7 +150,8 @@ def test_update_run_compares_before_it_swaps(store: SqliteStore) -> None:
         assert not transaction.update_run("unknown", change, state="working")
         assert transaction.get_run("r0").message == ""
         assert transaction.update_run("r0", {}, state="working")
-        assert transaction.update_run("r0", change, state=("sealed", "working"), stage="tally", waiting_for=None, holder=None)
+        assert transaction.update_run("r0", change, state=("sealed", "working"), stage="tally", waiting_for=None,
+                                      holder=None)
         assert transaction.get_run("r0").message == "x"
 
 
@@ -174,7 +175,8 @@ def test_of_many_who_move_a_run_exactly_one_wins(store: SqliteStore) -> None:
         won = []
         for number in range(20):
             with (store, other)[ticket % 2].write() as transaction:
-                if transaction.update_run(f"r{number}", {"state": "collected", "message": str(ticket)}, state="certified"):
+                change = {"state": "collected", "message": str(ticket)}
+                if transaction.update_run(f"r{number}", change, state="certified"):
                     won.append(f"r{number}")
         return won
 
@@ -333,7 +335,7 @@ def test_processes_claim_every_run_exactly_once(store: SqliteStore) -> None:
 
 
 def test_the_lease_of_a_killed_process_ends_at_once(store: SqliteStore) -> None:
-    """While the holder lives its run is not taken; when it is killed, the next claim gets it before the time is over."""
+    """While the holder lives its run is not taken; when it is killed, the next claim gets it without waiting."""
     add_runs(store, 1, state="sealed")
     holder = child("claim_and_hold", path_of(store))
     assert holder.stdout.readline() == "r0\n"

@@ -83,7 +83,8 @@ def test_every_single_byte_change_is_noticed(tmp_path: Path) -> None:
 def test_changes_in_a_file_of_several_segments_are_noticed(tmp_path: Path) -> None:
     """Header, both ends of every segment and tag, and a hundred places drawn at random."""
     path, raw = stored(tmp_path, 2 * SEGMENT_BYTES + 500)
-    edges = [HEADER_BYTES + k * SEALED + d for k in range(3) for d in (0, 1, SEGMENT_BYTES - 1, SEGMENT_BYTES, SEALED - 1)]
+    within = (0, 1, SEGMENT_BYTES - 1, SEGMENT_BYTES, SEALED - 1)
+    edges = [HEADER_BYTES + k * SEALED + d for k in range(3) for d in within]
     places = [*range(0, HEADER_BYTES, 5), *edges, len(raw) - 1, len(raw) - TAG_BYTES - 1]
     places += random.Random(7).choices(range(len(raw)), k=100)
     for place in {place for place in places if place < len(raw)}:
@@ -112,7 +113,8 @@ def test_cutting_at_an_edge_of_full_segments_is_noticed_on_opening(tmp_path: Pat
 def test_bytes_after_the_end_are_noticed(tmp_path: Path) -> None:
     """One byte, one tag, a copy of the last or of the first segment appended."""
     path, raw = stored(tmp_path, 2 * SEGMENT_BYTES)
-    for tail in (b"\x00", bytes(TAG_BYTES), bytes(TAG_BYTES + 1), raw[-SEALED:], raw[HEADER_BYTES:HEADER_BYTES + SEALED]):
+    first = raw[HEADER_BYTES:HEADER_BYTES + SEALED]
+    for tail in (b"\x00", bytes(TAG_BYTES), bytes(TAG_BYTES + 1), raw[-SEALED:], first):
         assert refused(path, raw + tail)
 
 
