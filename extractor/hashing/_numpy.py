@@ -1,8 +1,9 @@
 """FFT backend in float64 on numpy and scipy: exact, for every size, on any machine.
 
-Binary convolutions are computed over the integers (counts), rounded, and reduced modulo 2. Block sizes and the proof that
-rounding is exact are in `_plan`, the transforms in `_transform`. Memory does not depend on n: it is
-`Plan.memory_bytes`, at most max(0.8 GiB, 16 bytes per output bit + 0.4 GiB) and far less for m below a million.
+Binary convolutions are computed over the integers (counts), rounded, and reduced modulo 2. Block sizes and the
+proof that rounding is exact are in `_plan`, the transforms in `_transform`. Memory does not depend on n: it is
+`Plan.memory_bytes`, at most 0.8 GiB or, if more, min(16 bytes per output bit, 2 GiB) + 0.4 GiB and two bits per
+output bit; about 0.25 GiB at m = 10^6.
 """
 
 from __future__ import annotations

@@ -40,8 +40,8 @@ def keep_freed_memory() -> None:
     """Ask the allocator, by example, to reuse blocks up to about 31 MiB instead of returning them to the system.
 
     glibc raises its threshold for separate mappings to the size of the largest mapped block it has seen freed
-    (at most 32 MiB). Without this every temporary array is fresh memory, and its page faults cost as much as a transform.
-    Elsewhere it is an unused allocation.
+    (at most 32 MiB). Without this every temporary array is fresh memory, and its page faults cost as much as a
+    transform. Elsewhere it is an unused allocation.
     """
     np.empty(31 << 20, dtype=np.uint8)
 
@@ -83,7 +83,10 @@ class ShortTransform:
 
 
 class LongTransform:
-    """One real transform at a time, split into K rows of C points (module docstring); `columns` C >= 64 is for tests."""
+    """One real transform at a time, split into K rows of C points as in the module docstring.
+
+    columns  C, a multiple of 64 that leaves an even K; None = `split_columns`, other values serve tests
+    """
 
     batch = 1
 

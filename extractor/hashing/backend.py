@@ -24,7 +24,10 @@ class Engine(Protocol):
         ...
 
     def partial(self) -> bytes:
-        """Packed contribution to the m bits, ceil(m / 8) bytes, of all pushed since the last call; then start from zero."""
+        """Packed contribution to the m bits, ceil(m / 8) bytes, of all pushed since the last call.
+
+        The sum then starts from zero again; the position goes on.
+        """
         ...
 
 

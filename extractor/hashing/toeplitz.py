@@ -2,9 +2,10 @@
 
     y_i = XOR_j s[i - j + n - 1] x_j,      0 <= i < m,  0 <= j < n
 
-n raw bits x, m output bits y, a seed s of exactly n + m - 1 uniform bits, all packed LSB-first with tail bits zero. The family is
-2-universal (Carter and Wegman 1979) and linear, so the contributions of any pieces of the raw string XOR to the
-whole. It is one hash of one string: hashing pieces to separate outputs is something else and not covered by the bound.
+n raw bits x, m output bits y, a seed s of exactly n + m - 1 uniform bits, all packed LSB-first with tail bits zero.
+The family is 2-universal (Carter and Wegman 1979) and linear, so the contributions of any pieces of the raw string
+XOR to the whole. It is one hash of one string: hashing pieces to separate outputs is something else and not
+covered by the bound on the output length.
 """
 
 from __future__ import annotations

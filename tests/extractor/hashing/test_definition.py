@@ -59,7 +59,8 @@ def test_word_edges(backend, n):
         assert hash_with(backend, seed, raw, m).tolist() == hash_bits(seed.tolist(), raw.tolist(), m), m
 
 
-@pytest.mark.parametrize(("n", "m"), [(1023, 129), (1024, 64), (1025, 65), (1025, 1025), (511, 1025), (4097, 1), (1, 4097)])
+@pytest.mark.parametrize(("n", "m"), [(1023, 129), (1024, 64), (1025, 65), (1025, 1025), (511, 1025), (4097, 1),
+                                      (1, 4097)])
 def test_outside_check(backend, n, m):
     """scipy.linalg.matmul_toeplitz, rounded and reduced modulo 2, agrees (another program, another algorithm)."""
     seed, raw = random_bits(n + m - 1, 5), random_bits(n, 6)

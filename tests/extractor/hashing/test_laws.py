@@ -71,7 +71,7 @@ def test_any_plan(n, m, power, group, tiled, start):
 
 
 def test_long_transforms_and_tiles_agree():
-    """At 2^19 points, plans with one tile, with several tiles and with short transforms give the same bits, with one thread or two."""
+    """One tile, several tiles and short transforms give the same bits around 2^19 points, with one thread or two."""
     n, m = 900_001, 300_007
     seed, raw = random_bits(n + m - 1, 1), random_bits(n, 2)
     short = choose_plan(n, m, 1 << 16)
