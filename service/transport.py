@@ -26,7 +26,7 @@ ATTEMPTS = 6                            # per request, the first included
 FIRST_PAUSE_S, LONGEST_PAUSE_S, LONGEST_ASKED_PAUSE_S = 0.25, 8.0, 60
 CONNECT_TIMEOUT_S, READ_TIMEOUT_S = 10.0, 120.0
 LONGEST_TEXT_BYTES = 64 << 20           # a document (report, certificate, problem) larger than this is not one of ours
-BUSY = (429, 502, 503, 504)
+BUSY = (408, 429, 502, 503, 504)
 
 Progress = Callable[[int], None]        # called with the number of bytes that have gone by since the last call
 

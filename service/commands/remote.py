@@ -13,7 +13,7 @@ from typing import Any
 from extractor.errors import InputError, ProofError
 from service.client import FINAL_STATES, Client, ServiceProblem, sha256_of
 from service.commands.common import (
-    DONE, REFUSED, SPARSE_LINE_S, Progress, add_command, duration, emit, grouped, note, read_bytes, read_declaration,
+    DONE, REFUSED, SPARSE_LINE_S, Progress, add_command, bullets, duration, emit, grouped, note, read_bytes, read_declaration,
     read_json, rows, write_file,
 )
 from service.transport import DEFAULT_URL, is_this_machine
@@ -286,7 +286,8 @@ def run_lines(run: dict) -> list[str]:
         lines.append(("waits for", f"its seed: bellassay submit --run {run['id']} --seed S.bin"))
     if run.get("stage_seconds"):
         lines.append(("stages", ", ".join(f"{stage} {duration(s)}" for stage, s in run["stage_seconds"].items())))
-    return rows(lines)
+    flagged = [item["sentence"] for item in run.get("diagnostics") or () if item.get("flag")]
+    return rows(lines) + (["", "diagnostics (they certify nothing)", *bullets(flagged)] if flagged else [])
 
 
 # ---- collect
