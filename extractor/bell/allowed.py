@@ -1,8 +1,9 @@
 """What a declared settings distribution allows, and whether observed settings contradict it.
 
 A declared bias tau lets the chance of each setting bit of a test round, given everything before it, be off by up to
-tau. "Before it" may include the other station's bit of the same round, in either order, so the allowed
-distributions are spanned by x first, then y given x, and by y first, then x given y; each conditional chance at one end of its interval.
+tau. "Before it" may include the other station's bit of the same round, in either order, so the allowed distributions
+are spanned by x first, then y given x, and by y first, then x given y; each conditional chance at one end of its
+interval.
 """
 
 from __future__ import annotations
@@ -43,7 +44,7 @@ def allowed_distributions(settings: Settings) -> tuple[tuple[float, float, float
 def _shifted(chance: float, shift: float) -> float:
     moved = min(1.0, max(0.0, chance + shift))
     if moved in (0.0, 1.0):
-        raise InputError("a setting bit could stop varying at this bias; lower the bias or use a more even distribution",
+        raise InputError("a setting bit could stop varying at this bias; lower it or use a more even distribution",
                          code="bias-too-large", field="/settings/bias")
     return moved
 
@@ -61,7 +62,8 @@ def favourable_limit(settings: Settings, pair: tuple[int, int]) -> float:
     """Highest chance that a decisive round is the favourable one, favourable at `pair` and unfavourable at the others.
 
     A local strategy that has the favourable outcome at `pair` has an unfavourable one at one other pair at least
-    (Bierhorst, J. Phys. A 48, 195302 (2015), for uniform settings: 1/2), so the chance is at most p/(p + smallest other p).
+    (Bierhorst, J. Phys. A 48, 195302 (2015), for uniform settings: 1/2), so the chance is at most p/(p + smallest
+    other p).
     """
     at = SETTING_PAIRS.index(pair)
     return max(p[at] / (p[at] + min(p[:at] + p[at + 1:])) for p in allowed_distributions(settings))
@@ -71,7 +73,8 @@ def favourable_limit(settings: Settings, pair: tuple[int, int]) -> float:
 class SettingsCheck:
     """How observed settings compare with the allowed ones.
 
-    log_chance  ln of the chance, corrected for the number of comparisons, of settings at least this odd (0 = nothing odd)
+    log_chance  ln of the chance, corrected for the number of comparisons, of settings at least this odd (0 =
+                nothing odd)
     what        the oddest event in words, e.g. "settings (0, 1)" or "x = 0"
     observed    its observed frequency; low, high: the allowed interval
     """

@@ -1,12 +1,12 @@
 """The CH-conditioned count: decide between local and quantum by the few rounds that matter.
 
-Where nearly every round is empty, counting wins drowns in the empty ones. Clauser and Horne's inequality (in Eberhard's
-form) looks at four cells only, the decisive ones: with d, e the outcomes that stand for a detection,
+Where nearly every round is empty, counting wins drowns in the empty ones. Clauser and Horne's inequality (in
+Eberhard's form) looks at four cells only, the decisive ones: with d, e the outcomes that stand for a detection,
 
     J = P(d e | f) - P(d e' | f, other y) - P(d' e | other x, f) - P(d e | minus)  <= 0  for every local model,
 
-f the pair opposite to the one with the minus sign, d' and e' the other outcomes. For no-signalling
-probabilities S = 2 + 4 J. A round in one of the four cells is decisive, and favourable in the first one.
+f the pair opposite to the one with the minus sign, d' and e' the other outcomes. For no-signalling probabilities S =
+2 + 4 J. A round in one of the four cells is decisive, and favourable in the first one.
 """
 
 from __future__ import annotations
@@ -30,9 +30,10 @@ class DecisiveCount:
     favourable_cell   (x, y, a, b) of the favourable outcome
     value             J, or None if a setting pair never came up
     limit             highest chance of a local model that a decisive round is favourable
-    forms             forms that were tried; 2 when no no-click value says which outcome is a detection, and the p-values are doubled then
-    p_value           P[Bin(decisive, limit) >= favourable]: exact if the number of decisive rounds was fixed beforehand, or
-                      does not depend on their outcomes; None with `note` if it would be worthless
+    forms             forms that were tried; 2 when no no-click value says which outcome is a detection,
+                      and the p-values are doubled then
+    p_value           P[Bin(decisive, limit) >= favourable]: exact if the number of decisive rounds was fixed
+                      beforehand, or does not depend on their outcomes; None with `note` if it would be worthless
     memory_p_value    larger; holds also if the boxes stop making decisive rounds once they are ahead
     """
 
@@ -75,14 +76,15 @@ def count_decisive(tally: Tally, convention: Convention, settings: Settings, no_
     candidates = (told.pop(),) if len(told) == 1 else (0, 1)
     note = contradiction
     if len(told) == 2:
-        note = ("The no-click values make an empty round lose at three setting pairs under this convention, "
-                "so the count of decisive rounds does not apply; declare other no-click values or the flipped convention.")
+        note = ("The no-click values make an empty round lose at three setting pairs under this convention, so the "
+                "count of decisive rounds does not apply; declare other no-click values or the flipped convention.")
     best = min((_one_form(tally, decisive_cells(convention, d), settings, len(candidates), note) for d in candidates),
                key=lambda count: 0.0 if count.log10_p_value is None else count.log10_p_value)
     return best
 
 
-def _one_form(tally: Tally, four: tuple[Cell, Cell, Cell, Cell], settings: Settings, forms: int, note: str | None) -> DecisiveCount:
+def _one_form(tally: Tally, four: tuple[Cell, Cell, Cell, Cell], settings: Settings, forms: int,
+              note: str | None) -> DecisiveCount:
     counts = tally.test_counts()
     favourable, *others = (int(counts[cell]) for cell in four)
     unfavourable = sum(others)

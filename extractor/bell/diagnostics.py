@@ -1,9 +1,10 @@
 """Checks that can raise a flag and can certify nothing.
 
-Each diagnostic answers one plain question about a tally. Its p-value is the chance that a rig in order looks at least this odd,
-corrected for the comparisons inside the diagnostic; a flag goes up below FALSE_ALARM divided by the number of
-diagnostics made together, so that a rig in order raises any flag at all in at most one tally of a thousand. Rounds are taken as
-independent here, except for the settings and the test fraction, whose tails hold for any memory of the boxes.
+Each diagnostic answers one plain question about a tally. Its p-value is the chance that a rig in order looks at least
+this odd, corrected for the comparisons inside the diagnostic; a flag goes up below FALSE_ALARM divided by the number
+of diagnostics made together, so that a rig in order raises any flag at all in at most one tally of a thousand. Rounds
+are taken as independent here, except for the settings and the test fraction, whose tails hold for any memory of the
+boxes.
 """
 
 from __future__ import annotations
@@ -64,37 +65,50 @@ def diagnose_drift(segments: Sequence[Tally], convention: Convention = Conventio
     """
     scores = [_smooth_chsh(segment, convention) for segment in segments if _all_pairs(segment)]
     if len(scores) < 2:
-        return Diagnostic("drift", 0.0, None, False, "Fewer than two segments have all setting pairs, so drift cannot be judged.")
+        return Diagnostic("drift", 0.0, None, False,
+                          "Fewer than two segments have all setting pairs, so drift cannot be judged.")
     values, errors = (np.array(column) for column in zip(*scores))
     weights = errors ** -2.0
     mean = float(np.sum(weights * values) / np.sum(weights))
     log = log_chi_square_at_least(float(np.sum(weights * (values - mean) ** 2)), len(scores) - 1)
     spread = float(values.max() - values.min())
-    d = Diagnostic("drift", spread, as_p_value(log), False, f"S ranged over {spread:.4g} across {len(scores)} segments.")
-    return _flagged(d, FALSE_ALARM,
-                    "More than chance: the rig was not steady; look for misalignment or temperature, and calibrate closer to the run.")
+    d = Diagnostic("drift", spread, as_p_value(log), False,
+                   f"S ranged over {spread:.4g} across {len(scores)} segments.")
+    return _flagged(d, FALSE_ALARM)
 
 
-def _flagged(d: Diagnostic, level: float, advice: str | None = None) -> Diagnostic:
+def _flagged(d: Diagnostic, level: float) -> Diagnostic:
     """Raise the flag if the p-value is below the level, and append what to do, or that nothing is odd."""
     if d.p_value is None:
         return d
     flag = d.p_value < level
-    tail = (advice or _ADVICE[d.name]) if flag else "Within chance."
+    tail = _ADVICE[d.name] if flag else "Within chance."
     return replace(d, flag=flag, sentence=f"{d.sentence} {tail}")
 
 
 _ADVICE = {
-    "settings-frequencies": "More than chance: the settings were not drawn as declared, or rounds were lost depending on their settings; "
-                            "check the settings source and that no round was dropped.",
-    "test-fraction": "More than chance: test rounds were not chosen as declared; check the switch between test and generation rounds.",
-    "no-signalling": "More than chance: one station's outcome depends on the other's setting; look for cross-talk, "
-                     "drift together with the settings, or rounds dropped by outcome.",
-    "beyond-tsirelson": "No quantum rig can do this: suspect swapped labels, dropped rounds or stations that communicate.",
-    "other-convention": "The rig violates another CHSH expression than the declared one: settings or outcomes are probably labelled otherwise; "
-                        "declare that convention for the next run.",
-    "calibration-score": "More than chance: the rig scored differently than at calibration; calibrate again before the next declaration.",
-    "calibration-outcomes": "More than chance: the rig's outcomes changed since calibration; the declared score table may no longer fit.",
+    "settings-frequencies":
+        "More than chance: the settings were not drawn as declared, or rounds were lost depending on their settings; "
+        "check the settings source and that no round was dropped.",
+    "test-fraction":
+        "More than chance: test rounds were not chosen as declared; "
+        "check the switch between test and generation rounds.",
+    "no-signalling":
+        "More than chance: one station's outcome depends on the other's setting; look for cross-talk, "
+        "drift together with the settings, or rounds dropped by outcome.",
+    "beyond-tsirelson":
+        "No quantum rig can do this: suspect swapped labels, dropped rounds or stations that communicate.",
+    "other-convention":
+        "The rig violates another CHSH expression than the declared one: settings or outcomes are probably labelled "
+        "otherwise; declare that convention for the next run.",
+    "calibration-score":
+        "More than chance: the rig scored differently than at calibration; "
+        "calibrate again before the next declaration.",
+    "calibration-outcomes":
+        "More than chance: the rig's outcomes changed since calibration; the declared score table may no longer fit.",
+    "drift":
+        "More than chance: the rig was not steady; look for misalignment or temperature, "
+        "and calibrate closer to the run.",
 }
 
 
@@ -102,8 +116,8 @@ def _settings_frequencies(tally: Tally, settings: Settings) -> Diagnostic:
     check = check_settings(_pair_totals(tally), settings)
     outside = max(check.low - check.observed, check.observed - check.high, 0.0) if sum(_pair_totals(tally)) else 0.0
     return Diagnostic("settings-frequencies", outside, as_p_value(check.log_chance), False,
-                      f"Test rounds had {check.what} in {100 * check.observed:.4g} % of the cases, {100 * outside:.2g} percentage points "
-                      "outside what was declared.")
+                      f"Test rounds had {check.what} in {100 * check.observed:.4g} % of the cases, "
+                      f"{100 * outside:.2g} percentage points outside what was declared.")
 
 
 def _test_fraction(tally: Tally, settings: Settings) -> Diagnostic:
@@ -119,7 +133,7 @@ def _test_fraction(tally: Tally, settings: Settings) -> Diagnostic:
 
 
 def _no_signalling(tally: Tally) -> Diagnostic:
-    """Four comparisons: the chance of outcome 1 at one station for its setting, with the other's setting 0 against 1."""
+    """Four comparisons: the chance of outcome 1 at one station and setting, under the other's setting 0 and 1."""
     counts, worst, gap, where = tally.test_counts(), math.inf, 0.0, "a at x = 0"
     for side, own in ((side, own) for side in "ab" for own in (0, 1)):
         ones, totals = [], []
@@ -134,27 +148,31 @@ def _no_signalling(tally: Tally) -> Diagnostic:
             worst, gap = log, ones[0] / totals[0] - ones[1] / totals[1]
             where = f"{side} at {'x' if side == 'a' else 'y'} = {own}"
     return Diagnostic("no-signalling", abs(gap), as_p_value(min(0.0, worst)), False,
-                      f"The largest change of one station's outcomes with the other's setting is {abs(gap):.2g}, for {where}.")
+                      "The largest change of one station's outcomes with the other's setting is "
+                      f"{abs(gap):.2g}, for {where}.")
 
 
 def _beyond_tsirelson(tally: Tally) -> Diagnostic:
     if not _all_pairs(tally):
-        return Diagnostic("beyond-tsirelson", 0.0, None, False, "A setting pair never came up, so S cannot be compared with 2 sqrt 2.")
+        return Diagnostic("beyond-tsirelson", 0.0, None, False,
+                          "A setting pair never came up, so S cannot be compared with 2 sqrt 2.")
     s, error = max(_smooth_chsh(tally, c) for c in _conventions())
     log = log_normal_at_least((s - TSIRELSON) / error) + math.log(8)
     return Diagnostic("beyond-tsirelson", s, as_p_value(min(0.0, log)), False,
-                      f"The largest S of all eight CHSH expressions is {s:.6g} with standard error {error:.2g}; 2 sqrt 2 = 2.828427 is the quantum limit.")
+                      f"The largest S of all eight CHSH expressions is {s:.6g} with standard error {error:.2g}; "
+                      "2 sqrt 2 = 2.828427 is the quantum limit.")
 
 
 def _other_convention(tally: Tally, convention: Convention) -> Diagnostic:
     if not _all_pairs(tally):
-        return Diagnostic("other-convention", 0.0, None, False, "A setting pair never came up, so conventions cannot be compared.")
+        return Diagnostic("other-convention", 0.0, None, False,
+                          "A setting pair never came up, so conventions cannot be compared.")
     s, error, other = max((*_smooth_chsh(tally, c), str(c.minus) + (" flipped" if c.flip else ""))
                           for c in _conventions() if c != convention)
     log = log_normal_at_least((s - 2.0) / error) + math.log(7)
     return Diagnostic("other-convention", s, as_p_value(min(0.0, log)), False,
-                      f"The largest S under a convention other than the declared one is {s:.6g}, with the minus sign at {other}; "
-                      "at most one of the eight can exceed 2.")
+                      f"The largest S under a convention other than the declared one is {s:.6g}, "
+                      f"with the minus sign at {other}; at most one of the eight can exceed 2.")
 
 
 def _stuck(tally: Tally) -> Diagnostic:
@@ -171,17 +189,20 @@ def _stuck(tally: Tally) -> Diagnostic:
 
 def _calibration_score(tally: Tally, convention: Convention, calibration: Tally) -> Diagnostic:
     if not (_all_pairs(tally) and _all_pairs(calibration)):
-        return Diagnostic("calibration-score", 0.0, None, False, "A setting pair never came up, so S cannot be compared with the calibration.")
+        return Diagnostic("calibration-score", 0.0, None, False,
+                          "A setting pair never came up, so S cannot be compared with the calibration.")
     (s, e), (s_before, e_before) = _smooth_chsh(tally, convention), _smooth_chsh(calibration, convention)
-    log = log_normal_at_least(abs(s - s_before) / math.hypot(e, e_before)) + math.log(2)
+    error = math.hypot(e, e_before)
+    log = log_normal_at_least(abs(s - s_before) / error) + math.log(2)
     return Diagnostic("calibration-score", s - s_before, as_p_value(min(0.0, log)), False,
-                      f"S differs from the calibration by {s - s_before:+.4g} (standard error {math.hypot(e, e_before):.2g}).")
+                      f"S differs from the calibration by {s - s_before:+.4g} (standard error {error:.2g}).")
 
 
 def _calibration_outcomes(tally: Tally, calibration: Tally) -> Diagnostic:
-    """Chi-square homogeneity of the four outcome pairs within each (t, x, y), cells of fewer than _FEW expected rounds pooled."""
+    """Chi-square homogeneity of the outcome pairs within each (t, x, y), rare ones (< _FEW expected) pooled."""
     value, degrees, distance = 0.0, 0, 0.0
-    for now, before in zip(np.array(tally.counts, dtype=float).reshape(8, 4), np.array(calibration.counts, dtype=float).reshape(8, 4)):
+    both = np.array([tally.counts, calibration.counts], dtype=float).reshape(2, 8, 4)
+    for now, before in zip(*both):
         n, m = now.sum(), before.sum()
         if not n or not m:
             continue
@@ -196,7 +217,8 @@ def _calibration_outcomes(tally: Tally, calibration: Tally) -> Diagnostic:
         value += float(((table - expected) ** 2 / expected).sum())
         degrees += table.shape[1] - 1
     return Diagnostic("calibration-outcomes", distance, as_p_value(log_chi_square_at_least(value, degrees)), False,
-                      f"For some settings {100 * distance:.2g} % of the outcomes are distributed otherwise than at calibration.")
+                      f"For some settings {100 * distance:.2g} % of the outcomes are distributed "
+                      "otherwise than at calibration.")
 
 
 def _pair_totals(tally: Tally) -> tuple[int, int, int, int]:
@@ -213,7 +235,7 @@ def _conventions() -> list[Convention]:
 
 
 def _smooth_chsh(tally: Tally, convention: Convention) -> tuple[float, float]:
-    """S, and a standard error that stays positive when a correlator is +1 or -1: one round of each kind is added for it."""
+    """S, and a standard error (one round of each kind added) that stays positive when a correlator is +1 or -1."""
     counts, s, variance = tally.test_counts(), 0.0, 0.0
     for x, y in SETTING_PAIRS:
         equal, unequal = int(np.trace(counts[x, y])), int(counts[x, y, 0, 1] + counts[x, y, 1, 0])

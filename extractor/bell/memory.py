@@ -1,4 +1,4 @@
-"""Local boxes with memory: before every stretch of rounds they choose a deterministic strategy from all that happened."""
+"""Local boxes with memory: before every stretch of rounds they choose a strategy from all that happened."""
 
 from __future__ import annotations
 
@@ -33,8 +33,9 @@ class MemoryLocalRig:
     def __post_init__(self) -> None:
         if isinstance(self.policy, str) and self.policy not in POLICIES:
             raise InputError(f"{self.policy!r} is none of {', '.join(POLICIES)}", code="bad-choice", field="/policy")
-        if isinstance(self.reacts_every, bool) or not isinstance(self.reacts_every, int) or not 1 <= self.reacts_every <= BLOCK_ROUNDS:
-            raise InputError(f"{self.reacts_every!r} is not a whole number in 1..2^20", code="out-of-range", field="/reacts_every")
+        if type(self.reacts_every) is not int or not 1 <= self.reacts_every <= BLOCK_ROUNDS:
+            raise InputError(f"{self.reacts_every!r} is not a whole number in 1..2^20", code="out-of-range",
+                             field="/reacts_every")
         settings_probabilities(self.settings, self.setting_bias)
 
     def choose(self, past: Past) -> np.ndarray:
@@ -45,6 +46,7 @@ class MemoryLocalRig:
         return chosen
 
     def sampler(self, seed: int) -> _MemoryBlocks:
+        """Draws this rig's rounds block by block, in order."""
         return _MemoryBlocks(self, seed)
 
     def tallies(self, rounds: int, runs: int, random: np.random.Generator) -> np.ndarray:
@@ -74,7 +76,7 @@ class MemoryLocalRig:
 
 
 class _MemoryBlocks:
-    """Draws blocks in order; settings come from the block's own stream, choices from a second one, what happened from all before."""
+    """Draws blocks in order: settings from the block's own stream, choices from a second one and all the past."""
 
     def __init__(self, rig: MemoryLocalRig, seed: int) -> None:
         self._rig, self._seed, self._next = rig, seed, 0
@@ -89,7 +91,8 @@ class _MemoryBlocks:
         past.random = generator(self._seed, k, 1)
         drawn = self._table.draw(generator(self._seed, k), rounds)
         stretches = (rounds + every - 1) // every
-        seen = np.bincount(np.repeat(np.arange(stretches), every)[:rounds] * 8 + drawn, minlength=8 * stretches).reshape(stretches, 8)
+        where = np.repeat(np.arange(stretches) * 8, every)[:rounds] + drawn
+        seen = np.bincount(where, minlength=8 * stretches).reshape(stretches, 8)
         chosen = np.empty(stretches, dtype=np.intp)
         for i in range(stretches):
             past.strategy = self._rig.choose(past)

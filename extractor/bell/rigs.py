@@ -1,12 +1,14 @@
 """Simulated rigs: an honest one with the usual imperfections and faults, and local ones that only pretend.
 
-Rigs are for planning, rehearsal and tests; nothing simulated is ever certified as random. Every rig offers cell_probabilities(at_round),
-expected_tally_frequencies(at_round), chsh and winning_probability, and can be simulated.
+Rigs are for planning, rehearsal and tests; nothing simulated is random in the sense of a certificate. Every rig can be
+simulated; those without memory also offer cell_probabilities, expected_tally_frequencies, chsh and
+winning_probability.
 """
 
 from __future__ import annotations
 
 import math
+from abc import ABC, abstractmethod
 from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Protocol
@@ -23,16 +25,20 @@ from extractor.bell.wiring import check_chance, chsh_of, settings_probabilities,
 from extractor.errors import InputError
 from extractor.model import CELLS, SETTING_PAIRS, Convention, RoundBatch, Settings, Tally
 
-__all__ = ["Rig", "LocalRig", "MemoryLocalRig", "optimal_rig", "simulate", "simulate_many", "simulate_tally", "textbook_angles"]
+__all__ = [
+    "LocalRig", "MemoryLocalRig", "Rig", "optimal_rig", "simulate", "simulate_many", "simulate_tally",
+    "textbook_angles",
+]
 
 
-class _RoundByRound:
-    """What rigs whose rounds do not depend on each other have in common; subclasses give cell_probabilities."""
+class _RoundByRound(ABC):
+    """What rigs whose rounds do not depend on each other have in common."""
 
     convention: Convention
 
+    @abstractmethod
     def cell_probabilities(self, at_round: int = 0) -> np.ndarray:
-        raise InputError("this rig has no cell probabilities of a single round", code="bad-rig")
+        """Chance of every cell, shape (2, 2, 2, 2, 2) indexed [t, x, y, a, b]."""
 
     def expected_tally_frequencies(self, at_round: int = 0) -> np.ndarray:
         """Expected share of each cell, shape (32,), in the order of a tally."""
@@ -49,6 +55,7 @@ class _RoundByRound:
         return 0.5 + self.chsh / 8.0
 
     def sampler(self, seed: int) -> _Blocks:
+        """Draws this rig's rounds block by block."""
         return _Blocks(self, seed)
 
 
@@ -89,15 +96,18 @@ class Rig(_RoundByRound):
         for name in ("visibility", "pair_probability", "dropped_no_clicks", "dropped_losses"):
             check_chance(getattr(self, name), name)
         for name in ("efficiency", "dark_counts"):
+            if len(getattr(self, name)) != 2:
+                raise InputError("needs one number per station", code="bad-rig", field=f"/{name}")
             for value in getattr(self, name):
                 check_chance(value, name)
         for name, allowed in (("no_click", (0, 1)), ("stuck", (0, 1, None))):
             if len(getattr(self, name)) != 2 or any(value not in allowed for value in getattr(self, name)):
                 raise InputError("needs one outcome, 0 or 1, per station", code="bad-rig", field=f"/{name}")
-        if not math.isfinite(self.state_angle) or not math.isfinite(self.visibility_drift):
-            raise InputError("needs finite numbers", code="bad-rig", field="/state_angle or /visibility_drift")
-        if self.angles != "optimal" and (isinstance(self.angles, str) or not np.all(np.isfinite(np.array(self.angles, dtype=float)))
-                                         or np.shape(self.angles) != (2, 2)):
+        for name in ("state_angle", "visibility_drift"):
+            if not math.isfinite(getattr(self, name)):
+                raise InputError("needs a finite number", code="bad-rig", field=f"/{name}")
+        if self.angles != "optimal" and (isinstance(self.angles, str) or np.shape(self.angles) != (2, 2)
+                                         or not np.all(np.isfinite(np.array(self.angles, dtype=float)))):
             raise InputError('needs two angles per station, or "optimal"', code="bad-rig", field="/angles")
         settings_probabilities(self.settings, self.setting_bias)
 
@@ -110,7 +120,7 @@ class Rig(_RoundByRound):
                                      self.state_angle)[1]
 
     def cell_probabilities(self, at_round: int = 0) -> np.ndarray:
-        """Chance of every cell, shape (2, 2, 2, 2, 2) indexed [t, x, y, a, b], at round number at_round (matters under drift)."""
+        """Chance of every cell at a round number (matters under drift), shape (2, 2, 2, 2, 2) [t, x, y, a, b]."""
         visibility = min(1.0, max(0.0, self.visibility + self.visibility_drift * at_round / 1e6))
         alpha, beta = self.measured_angles
         outcome = np.zeros((2, 2, 2, 2))
@@ -180,22 +190,33 @@ class _Blocks:
         return self._table.draw(generator(self._seed, k), rounds)
 
 
+class Blocks(Protocol):
+    """Draws block k of a simulation, in order from 0."""
+
+    def block(self, k: int, rounds: int) -> np.ndarray:
+        """Cells of the first `rounds` rounds of block k, uint8 (rounds,)."""
+
+
 class SimulatedRig(Protocol):
-    def sampler(self, seed: int) -> object: ...
+    """Anything that can be simulated."""
+
+    def sampler(self, seed: int) -> Blocks:
+        """The blocks of the simulation with this seed."""
 
 
-def optimal_rig(efficiency: float | tuple[float, float] = 1.0, pair_probability: float = 1.0, visibility: float = 1.0, *,
-                settings: Settings = Settings(), convention: Convention = Convention(), no_click: tuple[int, int] | None = None,
-                dark_counts: tuple[float, float] = (0.0, 0.0)) -> Rig:
+def optimal_rig(efficiency: float | tuple[float, float] = 1.0, pair_probability: float = 1.0,
+                visibility: float = 1.0, *, settings: Settings = Settings(), convention: Convention = Convention(),
+                no_click: tuple[int, int] | None = None, dark_counts: tuple[float, float] = (0.0, 0.0)) -> Rig:
     """The honest rig with the state and angles of the largest S.
 
     efficiency  one number for both stations or one each
-    no_click    None: outcomes under which an empty round is won at three setting pairs (0, and 1 for b if the convention flips)
+    no_click    None: outcomes under which an empty round is won at three setting pairs (0,
+                and 1 for b if the convention flips)
     """
     both = (float(efficiency),) * 2 if isinstance(efficiency, (int, float)) else tuple(efficiency)
     counted = no_click if no_click is not None else (0, int(convention.flip))
     start = Rig(visibility, both, pair_probability=pair_probability, settings=settings, convention=convention,
-                no_click=counted, dark_counts=dark_counts, angles=textbook_angles(convention))      # checks the arguments
+                no_click=counted, dark_counts=dark_counts, angles=textbook_angles(convention))   # checks the arguments
     theta, angles = best_state_and_angles(both, visibility, start.dark_counts, counted, convention)
     return Rig(visibility, both, theta, pair_probability, angles, settings, convention, counted, tuple(dark_counts))
 
@@ -203,7 +224,8 @@ def optimal_rig(efficiency: float | tuple[float, float] = 1.0, pair_probability:
 def simulate(rig: SimulatedRig, rounds: int, seed: int) -> Iterator[RoundBatch]:
     """The rounds of a rig in batches of 2^20 (the last one shorter), reproducible from the seed.
 
-    A shorter simulation is the beginning of a longer one; what is drawn does not depend on how rounds are split into segments later.
+    A shorter simulation is the beginning of a longer one; what is drawn does not depend on how rounds are split
+    into segments later.
     """
     if isinstance(rounds, bool) or not isinstance(rounds, int) or rounds < 1:
         raise InputError(f"{rounds!r} is not a whole number >= 1", code="bad-number", field="/rounds")

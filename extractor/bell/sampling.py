@@ -22,14 +22,15 @@ def generator(seed: int, *path: int) -> np.random.Generator:
 class CellSampler:
     """Alias table over 2^k cells, exact for chances that are multiples of 2^-32 (others are rounded to those).
 
-    chances  shape (2^k,), k <= 8, non-negative, sum 1. A cell of chance 0 never comes up.
+    chances  shape (2^k,), 1 <= k <= 8, non-negative, sum 1. A cell of chance 0 never comes up.
     Walker's alias method, in integers: each of the 2^k columns holds 2^(32-k) words and at most two cells.
     """
 
     def __init__(self, chances: np.ndarray) -> None:
         flat = np.asarray(chances, dtype=float).ravel()
         self._index_bits = flat.size.bit_length() - 1
-        if flat.size != 1 << self._index_bits or flat.size > 256 or flat.min() < 0 or abs(flat.sum() - 1) > 1e-9:
+        proper = flat.min() >= 0 and abs(flat.sum() - 1) <= 1e-9
+        if flat.size != 1 << self._index_bits or not 2 <= flat.size <= 256 or not proper:
             raise Defect("an alias table needs 2^k non-negative chances that add up to 1")
         height = _WORD >> self._index_bits
         words = _rounded_words(flat)
@@ -50,9 +51,9 @@ class CellSampler:
         self._keep = np.array(keep, dtype=np.uint32)
 
     def draw(self, random: np.random.Generator, rounds: int) -> np.ndarray:
-        """`rounds` cells, uint8 (rounds,). A shorter draw is the beginning of a longer one from the same generator state."""
+        """Cells, uint8 (rounds,). From the same generator state a shorter draw is the beginning of a longer one."""
         word = random.integers(0, _WORD, size=rounds, dtype=np.uint32)
-        column = (word >> np.uint32(32 - self._index_bits)).astype(np.uint8) if self._index_bits else np.zeros(rounds, dtype=np.uint8)
+        column = (word >> np.uint32(32 - self._index_bits)).astype(np.uint8)
         height = word & np.uint32((_WORD >> self._index_bits) - 1)
         own = height < self._keep.take(column)
         pair = column.astype(np.uint16)
@@ -73,4 +74,5 @@ def _rounded_words(chances: np.ndarray) -> list[int]:
 
 def pack_cells(cells: np.ndarray) -> RoundBatch:
     """Cells 0..31, uint8 (rounds,), as packed planes."""
-    return RoundBatch(len(cells), {name: np.packbits(cells & bit, bitorder="little") for name, bit in _PLANE_BIT.items()})
+    planes = {name: np.packbits(cells & bit, bitorder="little") for name, bit in _PLANE_BIT.items()}
+    return RoundBatch(len(cells), planes)

@@ -1,7 +1,8 @@
 """The CHSH score of a tally: correlators, S, the winning probability and the evidence against local models.
 
-Generation rounds (t = 0) have fixed settings and do not enter. S is made of one correlator per setting pair, so settings
-that came up unequally often do not bias it; counting wins over all rounds would. Nothing here certifies randomness.
+Generation rounds (t = 0) have fixed settings and do not enter. S is made of one correlator per setting pair, so
+settings that came up unequally often do not bias it; counting wins over all rounds would. Nothing here certifies
+randomness.
 """
 
 from __future__ import annotations
@@ -9,6 +10,8 @@ from __future__ import annotations
 import math
 from dataclasses import asdict, dataclass
 from typing import Any
+
+import numpy as np
 
 from extractor.bell.allowed import SettingsCheck, bias_that_covers, check_settings, local_win_limit
 from extractor.bell.decisive import DecisiveCount, NoClick, count_decisive
@@ -28,8 +31,9 @@ class Score:
     winning_probability(_error)     w = 1/2 + S/8: what uniform settings would win
     wins, losses                    raw counts over all test rounds
     local_win_limit                 b, the highest chance of a local model to win a round under the declared settings
-    p_value, log10_p_value          P[Bin(test rounds, b) >= wins], whatever memory the boxes have; never 0; None with p_value_note
-                                    when the observed settings contradict the declared ones, which makes it worthless
+    p_value, log10_p_value          P[Bin(test rounds, b) >= wins], whatever memory the boxes have; never 0; None
+                                    with p_value_note when it would be worthless, because the observed settings
+                                    contradict the declared ones
     decisive                        the CH-conditioned count
     note                            why S is missing, or None
     """
@@ -79,7 +83,7 @@ def score(tally: Tally, convention: Convention = Convention(), settings: Setting
     n = sum(totals)
     correlators, errors = correlators_of(tally)
     chsh, chsh_error, note = _combine(correlators, errors, convention)
-    wins = sum(int(counts[x, y, a, b]) for x, y in SETTING_PAIRS for a in (0, 1) for b in (0, 1) if convention.wins(x, y, a, b))
+    wins = sum(int(counts[cell]) for cell in np.ndindex(2, 2, 2, 2) if convention.wins(*cell))
     limit = local_win_limit(settings)
     check = check_settings(totals, settings)
     p_note = None
@@ -119,15 +123,19 @@ def _combine(correlators: tuple[float | None, ...], errors: tuple[float | None, 
              convention: Convention) -> tuple[float | None, float | None, str | None]:
     missing = [str(pair) for pair, value in zip(SETTING_PAIRS, correlators) if value is None]
     if missing:
-        return None, None, f"No test rounds with settings {' or '.join(missing)}, so S cannot be formed; take more test rounds."
+        pairs = " or ".join(missing)
+        return None, None, f"No test rounds with settings {pairs}, so S cannot be formed; take more test rounds."
     chsh = math.fsum(convention.sign(*pair) * value for pair, value in zip(SETTING_PAIRS, correlators))
     return chsh, math.sqrt(math.fsum(error * error for error in errors)), None
 
 
 def _contradiction_note(check: SettingsCheck, totals: tuple[int, int, int, int], settings: Settings) -> str:
-    interval = f"{100 * check.low:.6g} %" if check.low == check.high else f"{100 * check.low:.6g} % to {100 * check.high:.6g} %"
+    interval = f"{100 * check.low:.6g} %"
+    if check.high > check.low:
+        interval += f" to {100 * check.high:.6g} %"
     cover = bias_that_covers(totals, settings)
     advice = ("declare the distribution that is really used" if cover is None else
               f"declare the distribution that is really used, or a bias of at least {cover:.2g},")
-    return (f"The test rounds had {check.what} in {100 * check.observed:.6g} % of the cases where the declared settings allow {interval}; "
-            f"counts of wins are then worthless as evidence, so no p-value is given. Find out why, and {advice} before the next run.")
+    return (f"The test rounds had {check.what} in {100 * check.observed:.6g} % of the cases, where the declared "
+            f"settings allow {interval}; counts of wins are then worthless as evidence, so no p-value is given. "
+            f"Find out why, and {advice} before the next run.")

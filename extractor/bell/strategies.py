@@ -1,7 +1,7 @@
 """Local strategies: what boxes without entanglement can do, with and without memory.
 
-A deterministic strategy fixes both outcomes for both settings. There are 16, numbered 8 a(0) + 4 a(1) + 2 b(0) + b(1); every local model is
-a mixture of them, and one with memory picks the mixture anew from all earlier rounds.
+A deterministic strategy fixes both outcomes for both settings. There are 16, numbered 8 a(0) + 4 a(1) + 2 b(0) +
+b(1); every local model is a mixture of them, and one with memory picks the mixture anew from all earlier rounds.
 """
 
 from __future__ import annotations
@@ -37,7 +37,7 @@ CELL_OF = _table()          # uint8 (16, 8): cell index a strategy produces at 4
 
 @lru_cache
 def losing_at(convention: Convention) -> tuple[int, int, int, int]:
-    """For each setting pair a strategy that loses there and wins at the other three (there are two; the lower number)."""
+    """For each setting pair the lower-numbered of the two strategies that lose there and win at the other three."""
     chosen = []
     for pair in SETTING_PAIRS:
         for strategy in range(STRATEGIES):
@@ -84,7 +84,7 @@ def bet_on_rarest(past: Past) -> np.ndarray:
 
 
 def switch_after_loss(past: Past) -> np.ndarray:
-    """Keep the strategy after a stretch with less than a quarter of losses, else lose at another pair, picked at random."""
+    """Keep the strategy after a stretch with at most a quarter of losses, else lose at a pair picked at random."""
     choices = np.array(losing_at(past.convention))
     won = _won_cells(past.convention)
     losses = past.last[:, 16:] @ ~won
@@ -96,12 +96,14 @@ def switch_after_loss(past: Past) -> np.ndarray:
 def stop_when_ahead(past: Past) -> np.ndarray:
     """Make decisive rounds until the favourable ones lead by more than two standard deviations, then stay silent.
 
-    The favourable cell is both outcomes 1 (Bob's inverted under a flip) at the pair opposite to the minus sign; silence is the other outcome always.
+    The favourable cell is both outcomes 1 (Bob's inverted under a flip) at the pair opposite to the minus sign;
+    silence is the other outcome always.
     """
     mx, my = past.convention.minus
     flip = int(past.convention.flip)
     favourable = cell_index(1, 1 - mx, 1 - my, 1, 1 ^ flip)
-    others = [cell_index(1, 1 - mx, my, 1, flip), cell_index(1, mx, 1 - my, 0, 1 ^ flip), cell_index(1, mx, my, 1, 1 ^ flip)]
+    others = [cell_index(1, 1 - mx, my, 1, flip), cell_index(1, mx, 1 - my, 0, 1 ^ flip),
+              cell_index(1, mx, my, 1, 1 ^ flip)]
     won, lost = past.tallies[:, favourable], past.tallies[:, others].sum(axis=1)
     eager, silent = (15, 0) if not flip else (12, 3)
     return np.where(won - lost > 2.0 * np.sqrt(won + lost + 1.0), silent, eager)
@@ -113,7 +115,11 @@ def wander(past: Past) -> np.ndarray:
 
 
 POLICIES: dict[str, Policy] = {
-    "bet-on-rarest": bet_on_rarest, "switch-after-loss": switch_after_loss, "stop-when-ahead": stop_when_ahead, "wander": wander}
+    "bet-on-rarest": bet_on_rarest,
+    "switch-after-loss": switch_after_loss,
+    "stop-when-ahead": stop_when_ahead,
+    "wander": wander,
+}
 
 
 def _won_cells(convention: Convention) -> np.ndarray:
@@ -123,6 +129,9 @@ def _won_cells(convention: Convention) -> np.ndarray:
 
 def largest_chsh(convention: Convention) -> float:
     """Largest S of the 16 strategies, by trying them all."""
-    def chsh(strategy: int) -> float:
-        return math.fsum(convention.sign(*p) * (1 if len(set(outcomes(strategy, *p))) == 1 else -1) for p in SETTING_PAIRS)
-    return max(chsh(strategy) for strategy in range(STRATEGIES))
+    def correlator(strategy: int, x: int, y: int) -> int:
+        a, b = outcomes(strategy, x, y)
+        return 1 if a == b else -1
+
+    return max(math.fsum(convention.sign(*pair) * correlator(strategy, *pair) for pair in SETTING_PAIRS)
+               for strategy in range(STRATEGIES))

@@ -1,7 +1,7 @@
 """Tails of the binomial distribution as logarithms, so that a tiny chance never becomes the number 0.
 
-Everything is a natural logarithm unless the name says log10. Where an approximation is used, it errs
-upward: a tail is never reported smaller than it is, beyond the last digits of the arithmetic.
+Everything is a natural logarithm unless the name says log10. Where an approximation is used, it errs upward: a tail
+is never reported smaller than it is, beyond the last digits of the arithmetic.
 """
 
 from __future__ import annotations
@@ -15,7 +15,8 @@ _DIRECT = 1e-280                        # above this the tail itself is a safe f
 
 
 def log_at_least(count: int, trials: int, chance: float) -> float:
-    """ln P[Bin(trials, chance) >= count], count any whole number, trials >= 0, 0 < chance < 1; -inf if count > trials."""
+    """ln P[Bin(trials, chance) >= count], count any whole number, trials >= 0, 0 < chance < 1;
+    -inf if count > trials."""
     if count <= 0:
         return 0.0
     if count > trials:
@@ -35,9 +36,11 @@ def log_at_most(count: int, trials: int, chance: float) -> float:
 def _log_far_tail(count: int, trials: int, chance: float) -> float:
     """Upper bound on the tail far above the mean: the first term times a geometric series.
 
-    First term by Stirling's formula with the bounds e^(1/(12n+1)) < n! / (sqrt(2 pi n) (n/e)^n) < e^(1/12n) (Robbins 1955);
+    First term by Stirling's formula with the bounds e^(1/(12n+1)) < n! / (sqrt(2 pi n) (n/e)^n) < e^(1/12n)
+    (Robbins 1955);
     its exponent -n D(count/n || chance) in the form of deviations from the mean, because the textbook form with three
-    log-factorials loses all digits at n = 1e10. The ratio of successive terms falls, so 1/(1 - first ratio) bounds the rest.
+    log-factorials loses all digits at n = 1e10. The ratio of successive terms falls, so 1/(1 - first ratio) bounds
+    the rest.
     """
     if count == trials:
         return trials * math.log(chance)

@@ -35,7 +35,8 @@ def click_probabilities(pair: np.ndarray, pair_probability: float, efficiency: t
                         dark_counts: tuple[float, float]) -> np.ndarray:
     """P(a, b) with the third value NO_CLICK, shape (3, 3).
 
-    A round holds a pair with chance pair_probability; a side sees its half with its efficiency. A side that sees nothing
+    A round holds a pair with chance pair_probability; a side sees its half with its efficiency.
+    A side that sees nothing
     clicks all the same with its dark-count chance, either outcome alike.
     """
     idle = [np.array([d / 2, d / 2, 1 - d]) for d in dark_counts]
@@ -44,12 +45,14 @@ def click_probabilities(pair: np.ndarray, pair_probability: float, efficiency: t
 
 
 def textbook_angles(convention: Convention) -> Angles:
-    """Angles with S = 2 sqrt 2 for the maximally entangled state: Alice 0, pi/4; Bob pi/8, -pi/8; relabelled for the convention."""
+    """Angles with S = 2 sqrt 2 for the maximally entangled state: Alice 0, pi/4; Bob pi/8, -pi/8;
+    relabelled for the convention."""
     return _relabelled(((0.0, math.pi / 4), (math.pi / 8, -math.pi / 8)), convention)
 
 
 def _relabelled(angles: Angles, convention: Convention) -> Angles:
-    """Angles for the convention from angles for minus (1, 1): swap settings; a flip inverts Bob's outcome, a turn by pi/2."""
+    """Angles for the convention from angles for minus (1, 1): swap settings; a flip inverts Bob's outcome,
+    a turn by pi/2."""
     (a0, a1), (b0, b1) = angles
     turn = math.pi / 2 if convention.flip else 0.0
     mx, my = convention.minus
@@ -57,7 +60,8 @@ def _relabelled(angles: Angles, convention: Convention) -> Angles:
 
 
 def best_state_and_angles(efficiency: tuple[float, float], visibility: float, dark_counts: tuple[float, float],
-                          no_click: tuple[int, int], convention: Convention, state_angle: float | None = None) -> tuple[float, Angles]:
+                          no_click: tuple[int, int], convention: Convention,
+                          state_angle: float | None = None) -> tuple[float, Angles]:
     """State angle and measurement angles of the largest S when a no-click counts as the given outcome.
 
     state_angle  keep this state and look for angles only; None: look for the state too

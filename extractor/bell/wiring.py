@@ -17,11 +17,12 @@ def check_chance(value: object, field: str) -> None:
 
 
 def settings_probabilities(settings: Settings, setting_bias: tuple[float, float] = (0.0, 0.0)) -> np.ndarray:
-    """P(t, x, y) as really drawn, shape (2, 2, 2): P(x = 0) and P(y = 0 | x) of test rounds shifted by the hidden bias."""
+    """P(t, x, y) as really drawn, shape (2, 2, 2): P(x = 0) and P(y = 0 | x) of test rounds shifted by the hidden
+    bias."""
     gamma, p = settings.test_probability, np.array(settings.distribution).reshape(2, 2)
     first = p[0].sum() + setting_bias[0]
     later = p[:, 0] / p.sum(axis=1) + setting_bias[1]
-    if not 0.0 <= first <= 1.0 or later.min() < 0.0 or later.max() > 1.0:
+    if not (0.0 <= first <= 1.0 and later.min() >= 0.0 and later.max() <= 1.0):
         raise InputError("shifts a chance of a setting out of 0..1", code="out-of-range", field="/setting_bias")
     out = np.zeros((2, 2, 2))
     out[1] = gamma * np.array([first, 1.0 - first])[:, None] * np.stack([later, 1.0 - later], axis=1)
@@ -47,6 +48,7 @@ def chsh_of(cells: np.ndarray, convention: Convention) -> float:
     for x, y in SETTING_PAIRS:
         outcome = cells[1, x, y]
         if outcome.sum() <= 0.0:
-            raise InputError(f"the settings {(x, y)} never come up, so there is no S", code="bad-rig", field="/settings")
+            raise InputError(f"the settings {(x, y)} never come up, so there is no S", code="bad-rig",
+                             field="/settings")
         total.append(convention.sign(x, y) * (np.trace(outcome) - outcome[0, 1] - outcome[1, 0]) / outcome.sum())
     return math.fsum(total)

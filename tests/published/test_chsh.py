@@ -16,7 +16,8 @@ CONVENTIONS = [Convention(pair, flip) for pair in SETTING_PAIRS for flip in (Fal
 
 @pytest.mark.parametrize("convention", CONVENTIONS)
 def test_local_strategies_reach_2_and_no_more(convention):
-    """Clauser, Horne, Shimony, Holt, PRL 23, 880 (1969): the 16 deterministic strategies have S = 2 or -2, w = 3/4 or 1/4."""
+    """Clauser, Horne, Shimony, Holt, PRL 23, 880 (1969): the 16 deterministic strategies have S = 2 or -2,
+    w = 3/4 or 1/4."""
     scores = [LocalRig.always(s, convention=convention).chsh for s in range(STRATEGIES)]
     assert sorted(scores) == [-2.0] * 8 + [2.0] * 8
     assert largest_chsh(convention) == 2.0
@@ -34,8 +35,10 @@ def test_a_strategy_loses_at_every_single_pair(convention):
 def test_quantum_maximum(convention):
     """Tsirelson, Lett. Math. Phys. 4, 93 (1980): S = 2 sqrt 2, w = (2 + sqrt 2)/4, under each convention."""
     rig = Rig(convention=convention)
-    assert rig.chsh == pytest.approx(2 * math.sqrt(2), abs=1e-12) == TSIRELSON_BOUND
-    assert rig.winning_probability == pytest.approx((2 + math.sqrt(2)) / 4, abs=1e-12) == pytest.approx(0.853553, abs=5e-7)
+    assert rig.chsh == pytest.approx(2 * math.sqrt(2), abs=1e-12)
+    assert TSIRELSON_BOUND == 2 * math.sqrt(2)
+    assert rig.winning_probability == pytest.approx((2 + math.sqrt(2)) / 4, abs=1e-12)
+    assert rig.winning_probability == pytest.approx(0.853553, abs=5e-7)
 
 
 def test_no_angles_beat_the_quantum_maximum():
@@ -54,10 +57,11 @@ def _correlator(outcome: np.ndarray) -> float:
 def test_singlet_correlator(degrees):
     """Common practice: spins along axes at angle theta have E = -cos theta in the singlet.
 
-    The singlet is |00> - |11> (state angle -pi/4) with Bob's basis states swapped, which turns his half-angle b into pi/2 - b.
+    The singlet is |00> - |11> (state angle -pi/4) with Bob's basis states swapped, which turns his half-angle b
+    into pi/2 - b.
     """
     theta = math.radians(degrees)
-    for turn in (0.0, 0.3, 1.1):        # only the angle between the axes matters; half-angles of directions turn, turn + theta
+    for turn in (0.0, 0.3, 1.1):        # only the angle between the axes matters
         alpha, beta = turn / 2, (turn + theta) / 2
         outcome = pair_probabilities(-math.pi / 4, 1.0, alpha, math.pi / 2 - beta)
         assert _correlator(outcome) == pytest.approx(-math.cos(theta), abs=1e-12)
@@ -65,7 +69,8 @@ def test_singlet_correlator(degrees):
 
 
 def test_the_45_45_45_135_layout():
-    """Common practice: axes at 45, 45, 45 and 135 degrees reach |S| = 2 sqrt 2, with three equal correlators and one opposite."""
+    """Common practice: axes at 45, 45, 45 and 135 degrees reach |S| = 2 sqrt 2, with three equal correlators and
+    one opposite."""
     (a0, a1), (b0, b1) = textbook_angles(Convention())
     between = [abs(2 * (a - b)) for a in (a0, a1) for b in (b0, b1)]       # angles of directions, twice the half-angles
     assert sorted(math.degrees(v) for v in between) == pytest.approx([45, 45, 45, 135])

@@ -6,15 +6,20 @@ import pytest
 
 from extractor.bell.rigs import Rig, optimal_rig
 
-# Largest S over cos t |00> + sin t |11> and real measurements, no-click counted as +1, and t in degrees; computed independently.
-TABLE = [(1.0, 2.828427, 45.0), (0.95, 2.569746, 41.0), (0.90, 2.359631, 36.5), (0.85, 2.198761, 31.3), (0.8284, 2.144666, 28.7),
-         (0.80, 2.087640, 24.9), (0.78, 2.056901, 22.1), (0.75, 2.024604, 17.3), (0.70, 2.001814, 7.8), (0.68, 2.000123, 3.3)]
+# Largest S over cos t |00> + sin t |11> and real measurements, no-click counted as +1, and t in degrees;
+# computed independently.
+TABLE = [
+    (1.0, 2.828427, 45.0), (0.95, 2.569746, 41.0), (0.90, 2.359631, 36.5), (0.85, 2.198761, 31.3),
+    (0.8284, 2.144666, 28.7), (0.80, 2.087640, 24.9), (0.78, 2.056901, 22.1), (0.75, 2.024604, 17.3),
+    (0.70, 2.001814, 7.8), (0.68, 2.000123, 3.3),
+]
 MAXIMALLY_ENTANGLED = [(1.0, 2.828427), (0.95, 2.557655), (0.90, 2.311026), (0.85, 2.088539)]
 
 
 @pytest.mark.parametrize("efficiency, chsh, degrees", TABLE)
 def test_largest_chsh_for_an_efficiency(efficiency, chsh, degrees):
-    """The optimal rig reaches the independently computed S and state angle (problem of Eberhard, PRA 47, R747 (1993))."""
+    """The optimal rig reaches the independently computed S and state angle (problem of Eberhard, PRA 47,
+    R747 (1993))."""
     rig = optimal_rig(efficiency)
     assert rig.chsh == pytest.approx(chsh, abs=1.1e-6)
     assert math.degrees(rig.state_angle) == pytest.approx(degrees, abs=0.06)
@@ -50,5 +55,6 @@ def test_the_best_state_violates_where_the_maximally_entangled_one_cannot():
 
 
 def test_discarding_no_clicks_hides_any_efficiency():
-    """The detection loophole: if all rounds with a no-click vanish, S is 2 sqrt 2 at any efficiency (Pearle, PRD 2, 1418 (1970))."""
+    """The detection loophole: if all rounds with a no-click vanish, S is 2 sqrt 2 at any efficiency (Pearle, PRD 2,
+    1418 (1970))."""
     assert Rig(efficiency=(0.3, 0.4), dropped_no_clicks=1.0).chsh == pytest.approx(2 * math.sqrt(2), abs=1e-12)

@@ -15,7 +15,8 @@ DETECTION_IS_0 = (1, 1)     # no_click values: + is our 0
 
 
 def test_delft_score():
-    """Hensen et al., Nature 526, 682 (2015): 245 rounds, S = 2.42 +- 0.20; 196 wins and the correlators follow from the counts."""
+    """Hensen et al., Nature 526, 682 (2015): 245 rounds, S = 2.42 +- 0.20; 196 wins and the correlators follow from
+    the counts."""
     s = score(tally_of(DELFT_2015))
     assert (s.test_rounds, s.wins, s.losses, s.settings_counts) == (245, 196, 49, (53, 79, 62, 51))
     assert s.chsh == pytest.approx(2.4225, abs=1e-6)
@@ -25,7 +26,8 @@ def test_delft_score():
 
 
 def test_delft_p_value():
-    """Hensen et al. 2015 print p = 0.039; the binomial tails for bias 0 and 1.08e-5 (bias from memory) are 0.03908 and 0.0391."""
+    """Hensen et al. 2015 print p = 0.039; the binomial tails for bias 0 and 1.08e-5 (bias from memory) are 0.03908
+    and 0.0391."""
     assert score(tally_of(DELFT_2015)).p_value == pytest.approx(0.03908, abs=5e-6)
     biased = Settings(bias=1.08e-5)
     assert local_win_limit(biased) == pytest.approx(0.75 + 1.08e-5 - 1.08e-5**2, abs=1e-15)
@@ -35,12 +37,14 @@ def test_delft_p_value():
 
 
 def test_delft_second_run():
-    """Hensen et al., Sci. Rep. 6, 30289 (2016), from memory: 300 rounds, p = 0.061; 237 wins fit that (the number of wins is inferred)."""
+    """Hensen et al., Sci. Rep. 6, 30289 (2016), from memory: 300 rounds, p = 0.061; 237 wins fit that (the number
+    of wins is inferred)."""
     assert math.exp(log_at_least(237, 300, 0.75)) == pytest.approx(0.061, abs=5e-4)
 
 
 def test_munich_score():
-    """150 events with atoms, public re-analysis (companion of arXiv:2209.00702): S = 2.609, 124 wins; p evaluated from the counts."""
+    """150 events with atoms, public re-analysis (companion of arXiv:2209.00702): S = 2.609, 124 wins;
+    p evaluated from the counts."""
     s = score(tally_of(MUNICH_150))
     assert (s.test_rounds, s.wins) == (150, 124)
     assert s.chsh == pytest.approx(2.609047, abs=1e-6)
@@ -49,7 +53,8 @@ def test_munich_score():
 
 
 def test_vienna_score():
-    """Giustina et al., PRL 115, 250401 (2015): 3 502 784 150 rounds, J = 7.27e-6; S from the same counts, evaluated here."""
+    """Giustina et al., PRL 115, 250401 (2015): 3 502 784 150 rounds, J = 7.27e-6; S from the same counts,
+    evaluated here."""
     s = score(tally_of(VIENNA_2015), no_click=DETECTION_IS_0)
     assert (s.test_rounds, s.wins) == (3502784150, 2627096168)
     assert s.decisive.value == pytest.approx(7.27e-6, abs=5e-9)
@@ -59,7 +64,8 @@ def test_vienna_score():
 
 
 def test_vienna_wins_have_no_power_but_decisive_rounds_do():
-    """Counting wins of mostly empty rounds gives 0.377, the CH-conditioned count (Bierhorst, J. Phys. A 48, 195302 (2015)) 5.2e-34."""
+    """Counting wins of mostly empty rounds gives 0.377, the CH-conditioned count (Bierhorst, J. Phys. A 48,
+    195302 (2015)) 5.2e-34."""
     assert math.exp(log_at_least(2627096168, 3502784150, 0.75)) == pytest.approx(0.377, abs=5e-4)
     d = score(tally_of(VIENNA_2015), no_click=DETECTION_IS_0).decisive
     assert (d.favourable, d.unfavourable, d.limit, d.forms) == (141439, 135075, 0.5, 1)
@@ -68,7 +74,8 @@ def test_vienna_wins_have_no_power_but_decisive_rounds_do():
 
 
 def test_vienna_settings_contradict_exact_uniformity_and_a_declared_bias_covers_them():
-    """Setting pairs (1,2), (2,1) came up 7 standard deviations off a quarter: no p-value at bias 0; bias 2.4e-4 (from memory) is covered."""
+    """Setting pairs (1,2), (2,1) came up 7 standard deviations off a quarter: no p-value at bias 0;
+    bias 2.4e-4 (from memory) is covered."""
     s = score(tally_of(VIENNA_2015), no_click=DETECTION_IS_0)
     assert s.p_value is None and s.ch_p_value is None and "(1, 0)" in s.p_value_note
     biased = score(tally_of(VIENNA_2015), settings=Settings(bias=2.4e-4), no_click=DETECTION_IS_0)
@@ -78,7 +85,8 @@ def test_vienna_settings_contradict_exact_uniformity_and_a_declared_bias_covers_
 
 
 def test_nist_score():
-    """Shalm et al., PRL 115, 250402 (2015), aggregated counts: J = 1.207e-5, S - 2 about 9.2e-5 (public re-analysis, evaluated here)."""
+    """Shalm et al., PRL 115, 250402 (2015), aggregated counts: J = 1.207e-5, S - 2 about 9.2e-5 (public
+    re-analysis, evaluated here)."""
     s = score(tally_of(NIST_2015), no_click=DETECTION_IS_0)
     assert s.test_rounds == 173149423
     assert s.settings_counts == (43910205, 43309801, 43368944, 42560473)
@@ -88,7 +96,8 @@ def test_nist_score():
 
 
 def test_nist_raw_wins_are_worthless_and_are_not_used():
-    """Unequal settings make raw wins 0.7542 of the rounds though (S - 2)/8 is 1.2e-5: no p-value, a note and a flag instead."""
+    """Unequal settings make raw wins 0.7542 of the rounds though (S - 2)/8 is 1.2e-5: no p-value,
+    a note and a flag instead."""
     s = score(tally_of(NIST_2015), no_click=DETECTION_IS_0)
     assert s.wins == 130589817
     assert s.wins / s.test_rounds == pytest.approx(0.7542, abs=5e-5)
@@ -100,7 +109,8 @@ def test_nist_raw_wins_are_worthless_and_are_not_used():
 
 
 def test_nist_decisive_rounds():
-    """6378 against 5770 gives 1.8e-8; against 5749 (the paper's 12 127 decisive rounds, from memory) 5.9e-9, as printed there."""
+    """6378 against 5770 gives 1.8e-8; against 5749 (the paper's 12 127 decisive rounds, from memory) 5.9e-9,
+    as printed there."""
     d = score(tally_of(NIST_2015), no_click=DETECTION_IS_0).decisive
     assert (d.favourable, d.unfavourable) == (6378, 5770)
     assert math.exp(log_at_least(6378, 6378 + 5770, 0.5)) == pytest.approx(1.8e-8, rel=0.02)
@@ -108,7 +118,8 @@ def test_nist_decisive_rounds():
 
 
 def test_nist_with_the_settings_that_came_up():
-    """Taken at the frequencies that came up, the limit of the decisive count is 0.5078, not 1/2, and its p-value rises to about 1e-4."""
+    """Taken at the frequencies that came up, the limit of the decisive count is 0.5078, not 1/2,
+    and its p-value rises to about 1e-4."""
     totals = score(tally_of(NIST_2015)).settings_counts
     n = sum(totals)
     first = [k / n for k in totals[:3]]

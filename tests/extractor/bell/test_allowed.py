@@ -5,7 +5,9 @@ import math
 import numpy as np
 import pytest
 
-from extractor.bell.allowed import allowed_distributions, bias_that_covers, check_settings, favourable_limit, local_win_limit
+from extractor.bell.allowed import (
+    allowed_distributions, bias_that_covers, check_settings, favourable_limit, local_win_limit,
+)
 from extractor.errors import InputError
 from extractor.model import SETTING_PAIRS, Settings
 

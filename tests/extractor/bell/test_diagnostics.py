@@ -98,7 +98,8 @@ def test_documents_are_json_and_order_is_fixed():
     tally = tally_of(((5, 1, 1, 5),) * 4)
     made = diagnose(tally, calibration=tally)
     assert [json.loads(json.dumps(d.document(), allow_nan=False))["name"] for d in made] == [
-        "settings-frequencies", "test-fraction", "no-signalling", "beyond-tsirelson", "other-convention", "stuck-outcome",
+        "settings-frequencies", "test-fraction", "no-signalling", "beyond-tsirelson", "other-convention",
+        "stuck-outcome",
         "calibration-score", "calibration-outcomes"]
     assert all(d.sentence.endswith(".") for d in made)
 

@@ -13,13 +13,15 @@ from extractor.model import PLANES, Convention, Settings, Tally
 
 
 def scores(rig: MemoryLocalRig, rounds: int, runs: int, **more):
-    return [score(Tally(tuple(int(c) for c in row)), rig.convention, rig.settings, **more) for row in simulate_many(rig, rounds, runs, seed=17)]
+    rows = simulate_many(rig, rounds, runs, seed=17)
+    return [score(Tally(tuple(int(c) for c in row)), rig.convention, rig.settings, **more) for row in rows]
 
 
 @pytest.mark.parametrize("policy", POLICIES)
 @pytest.mark.parametrize("convention", [Convention(), Convention((0, 1), True)])
 def test_p_values_hold_whatever_the_memory(policy, convention):
-    """Over 600 runs of adaptive local boxes, p-values below 0.05 come in 5 per cent at most (four standard deviations granted)."""
+    """Over 600 runs of adaptive local boxes, p-values below 0.05 come in 5 per cent at most (four standard
+    deviations granted)."""
     rig = MemoryLocalRig(policy, convention=convention, reacts_every=1)
     got = scores(rig, 400, 600, no_click=(0, int(convention.flip)))
     granted = 0.05 + 4 * np.sqrt(0.05 * 0.95 / 600)
@@ -28,7 +30,8 @@ def test_p_values_hold_whatever_the_memory(policy, convention):
 
 
 def test_a_count_of_decisive_rounds_can_be_fooled_by_stopping_when_ahead():
-    """Boxes that fall silent once ahead make the plain CH-conditioned p-value small far too often; the memory-robust one stays honest."""
+    """Boxes that fall silent once ahead make the plain CH-conditioned p-value small far too often;
+    the memory-robust one stays honest."""
     got = scores(MemoryLocalRig("stop-when-ahead", reacts_every=1), 2000, 500, no_click=(0, 0))
     assert np.mean([s.ch_p_value < 0.05 for s in got]) > 0.15
     assert np.mean([s.decisive.memory_p_value < 0.05 for s in got]) < 0.05
@@ -55,12 +58,14 @@ def test_tallies_have_the_right_rounds(reacts_every):
 
 
 def test_streamed_rounds_are_reproducible_and_a_prefix():
-    """Rounds of boxes with memory depend on the seed only, and fewer rounds are the beginning of more, across blocks."""
+    """Rounds of boxes with memory depend on the seed only, and fewer rounds are the beginning of more,
+    across blocks."""
     rig = MemoryLocalRig("switch-after-loss", reacts_every=4096)
 
     def bits(rounds):
         batches = list(simulate(rig, rounds, 9))
-        return {p: np.concatenate([np.unpackbits(b.planes[p], count=b.rounds, bitorder="little") for b in batches]) for p in PLANES}
+        return {p: np.concatenate([np.unpackbits(b.planes[p], count=b.rounds, bitorder="little") for b in batches])
+                for p in PLANES}
 
     long, short = bits(BLOCK_ROUNDS + 50_000), bits(BLOCK_ROUNDS + 20_000)
     for plane in PLANES:

@@ -10,7 +10,7 @@ from extractor.bell.rigs import LocalRig, MemoryLocalRig, Rig, optimal_rig, simu
 from extractor.bell.sampling import BLOCK_ROUNDS, CellSampler, generator
 from extractor.bell.wiring import settings_probabilities
 from extractor.errors import Defect, InputError
-from extractor.model import PLANES, SETTING_PAIRS, Convention, Settings
+from extractor.model import PLANES, SETTING_PAIRS, Convention, Settings, cell_index
 
 WEIGHTED = Settings(test_probability=0.3, distribution=(0.4, 0.3, 0.2, 0.1), generation=(1, 0))
 RIGS = {
@@ -78,7 +78,8 @@ def test_simulated_tallies_fit(name):
 def test_simulation_is_reproducible_and_a_prefix_of_a_longer_one():
     """The same seed gives the same planes, another seed others, and fewer rounds are the beginning of more."""
     def bits(rounds, seed, name):
-        return np.concatenate([np.unpackbits(b.planes[name], count=b.rounds, bitorder="little") for b in simulate(Rig(), rounds, seed)])
+        return np.concatenate([np.unpackbits(batch.planes[name], count=batch.rounds, bitorder="little")
+                               for batch in simulate(Rig(), rounds, seed)])
 
     long = bits(BLOCK_ROUNDS + 1000, 7, "a")
     assert np.array_equal(long, bits(BLOCK_ROUNDS + 1000, 7, "a"))
@@ -95,7 +96,8 @@ def test_batches_are_bounded():
 
 @pytest.mark.parametrize("convention", [Convention(p, f) for p in SETTING_PAIRS for f in (False, True)])
 def test_optimal_rig_under_each_convention(convention):
-    """The largest S is the same under each convention, and empty rounds are won at three pairs, whatever the no-click outcomes chosen so."""
+    """The largest S is the same under each convention, and empty rounds are won at three pairs,
+    whatever the no-click outcomes chosen so."""
     assert optimal_rig(0.9, convention=convention).chsh == pytest.approx(2.359631, abs=1e-6)
     turned = optimal_rig(0.9, convention=convention, no_click=(1, 1 ^ int(convention.flip)))
     assert turned.chsh == pytest.approx(2.359631, abs=1e-6)
@@ -120,7 +122,8 @@ def test_optimal_rig_beats_its_neighbours():
     for _ in range(200):
         step = random.normal(0, 0.01, 5)
         (a0, a1), (b0, b1) = rig.measured_angles
-        near = Rig(rig.visibility, rig.efficiency, rig.state_angle + step[4], angles=((a0 + step[0], a1 + step[1]), (b0 + step[2], b1 + step[3])),
+        angles = ((a0 + step[0], a1 + step[1]), (b0 + step[2], b1 + step[3]))
+        near = Rig(rig.visibility, rig.efficiency, rig.state_angle + step[4], angles=angles,
                    dark_counts=rig.dark_counts)
         assert near.chsh <= rig.chsh + 1e-9
 
@@ -134,8 +137,8 @@ def test_drift_changes_blocks_and_the_tally():
     wins = np.unpackbits(~(last.planes["a"] ^ last.planes["b"] ^ (last.planes["x"] & last.planes["y"]))).mean()
     assert wins == pytest.approx(0.5 + math.sqrt(2) / 4 * (0.9 - 0.05 * 2.5 * BLOCK_ROUNDS / 1e6), abs=2e-3)
     early, late = simulate_many(rig, BLOCK_ROUNDS, 1, 1), simulate_many(rig, 8 * BLOCK_ROUNDS, 1, 1)
-    won = [sum(int(row[16 + i]) for i in range(16) if Convention().wins(i >> 3, i >> 2 & 1, i >> 1 & 1, i & 1)) / row.sum()
-           for row in (early[0], late[0])]
+    winning = [cell_index(1, *cell) for cell in np.ndindex(2, 2, 2, 2) if Convention().wins(*cell)]
+    won = [row[winning].sum() / row.sum() for row in (early[0], late[0])]
     assert won[1] < won[0] - 0.03
 
 
