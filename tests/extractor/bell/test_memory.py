@@ -20,11 +20,11 @@ def scores(rig: MemoryLocalRig, rounds: int, runs: int, **more):
 @pytest.mark.parametrize("policy", POLICIES)
 @pytest.mark.parametrize("convention", [Convention(), Convention((0, 1), True)])
 def test_p_values_hold_whatever_the_memory(policy, convention):
-    """Over 600 runs of adaptive local boxes, p-values below 0.05 come in 5 per cent at most (four standard
+    """Over 300 runs of adaptive local boxes, p-values below 0.05 come in 5 per cent at most (four standard
     deviations granted)."""
     rig = MemoryLocalRig(policy, convention=convention, reacts_every=1)
-    got = scores(rig, 400, 600, no_click=(0, int(convention.flip)))
-    granted = 0.05 + 4 * np.sqrt(0.05 * 0.95 / 600)
+    got = scores(rig, 400, 300, no_click=(0, int(convention.flip)))
+    granted = 0.05 + 4 * np.sqrt(0.05 * 0.95 / 300)
     assert np.mean([s.p_value < 0.05 for s in got]) < granted
     assert np.mean([(s.decisive.memory_p_value or 1.0) < 0.05 for s in got]) < granted
 
