@@ -138,7 +138,7 @@ class _Reader:
         return rows
 
     def _stop(self, error: InputError, columns: np.ndarray, bits: list[str], rows: int) -> NoReturn:
-        """Raise `error`, unless one of the `rows` before it has a fault that only `intake` sees: that one goes first."""
+        """Raise `error`, unless one of the `rows` before it has a fault that only `intake` sees: that goes first."""
         if rows:
             self._intake.values({name: columns[k, :rows] for k, name in enumerate(bits)})
         raise error

@@ -108,8 +108,8 @@ def test_checksums():
     assert (error.code, error.field) == ("checksum-mismatch", "t")
 
 
-def _built(payloads: dict[str, bytes], *, packed: dict[str, bytes] | None = None, descriptor: str = "", long: bool = False,
-           claimed: dict[str, int] | None = None) -> bytes:
+def _built(payloads: dict[str, bytes], *, packed: dict[str, bytes] | None = None, descriptor: str = "",
+           long: bool = False, claimed: dict[str, int] | None = None) -> bytes:
     """An archive put together by hand: data descriptors, zip64 numbers and false sizes on demand."""
     body, directory = b"", b""
     for name, data in payloads.items():
@@ -162,7 +162,8 @@ def test_archives_of_streaming_and_large_file_writers(descriptor, long, deflated
     if long:
         at = data.index(b"PK\6\6")
         for place in (at, at + 4, at + 16, at + 24, at + 32, at + 40, at + 48, at + 56, at + 64):
-            assert fault(data[:place] + bytes([data[place] ^ 1]) + data[place + 1 :]).code in ("bad-archive", "truncated-file")
+            error = fault(data[:place] + bytes([data[place] ^ 1]) + data[place + 1 :])
+            assert error.code in ("bad-archive", "truncated-file")
 
 
 def test_false_sizes_of_deflated_members():

@@ -63,7 +63,8 @@ def _bomb(rounds: int) -> bytes:
     size, body, directory = len(head) + rounds, b"", b""
     for name in "xyab":
         raw, offset = f"{name}.npy".encode(), len(body)
-        body += struct.pack("<4sHHHHHIIIHH", b"PK\3\4", 20, 0, 8, 0, 33, crc, len(stream), size, len(raw), 0) + raw + stream
+        body += struct.pack("<4sHHHHHIIIHH", b"PK\3\4", 20, 0, 8, 0, 33, crc, len(stream), size, len(raw), 0)
+        body += raw + stream
         directory += struct.pack("<4sHHHHHHIIIHHHHHII", b"PK\1\2", 20, 20, 0, 8, 0, 33, crc, len(stream), size,
                                  len(raw), 0, 0, 0, 0, 0, offset) + raw
     return body + directory + struct.pack("<4sHHHHIIH", b"PK\5\6", 0, 0, 4, 4, len(directory), len(body), 0)

@@ -19,7 +19,7 @@ from extractor.records.planes import (
 )
 from tests.extractor.records.samples import batch_of, columns_of, joined, same
 
-QUICK = settings(derandomize=True, deadline=None, max_examples=60, database=None)
+QUICK = settings(derandomize=True, deadline=None, max_examples=40, database=None)
 
 
 def _split(columns: dict[str, np.ndarray], sizes: list[int]) -> list[RoundBatch]:
