@@ -12,10 +12,7 @@ copy, or has another history.
 
 from __future__ import annotations
 
-import fcntl
-import os
-from collections.abc import Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -26,7 +23,7 @@ from extractor.seal.canonical import canonical_bytes
 from service.errors import StorageFailed
 from service.keys import ledger_signer
 from service.store.contracts import LedgerEntryRow, LedgerHeadRow, Reading, Store, Transaction
-from service.store.durable import storage_errors, write_durably
+from service.store.durable import exclusive, storage_errors, write_durably
 
 ENTRY_FORMAT = "bellassay ledger entry 1"
 KINDS = ("declaration", "seal", "seed", "certificate", "refusal", "result", "collection", "erasure")
@@ -180,7 +177,7 @@ class Ledger:
 
     def _keep_copy(self, size: int, signed: str) -> None:
         """Writes the copy durably, unless one of a larger tree is there already."""
-        with self._copy_lock():
+        with exclusive(self._copy_path):
             there = _read_copy(self._copy_path)
             try:
                 if there is not None and self._opened(there)[0] >= size:
@@ -189,17 +186,6 @@ class Ledger:
                 raise StorageFailed(f"{self._copy_path.name} was changed by somebody else: {fault}",
                                     code="ledger-copy-changed") from None
             write_durably(self._copy_path, signed.encode(), 0o600)
-
-    @contextmanager
-    def _copy_lock(self) -> Iterator[None]:
-        lock = self._copy_path.with_name(f"{self._copy_path.name}.lock")
-        with storage_errors(lock):
-            handle = os.open(lock, os.O_RDWR | os.O_CREAT, 0o600)
-        try:
-            fcntl.flock(handle, fcntl.LOCK_EX)      # released with the handle, also by a killed process
-            yield
-        finally:
-            os.close(handle)
 
 
 def _read_copy(path: Path) -> str | None:

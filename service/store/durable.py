@@ -8,6 +8,7 @@ and would report success the second time.
 from __future__ import annotations
 
 import errno
+import fcntl
 import os
 import secrets
 from collections.abc import Iterator
@@ -67,6 +68,19 @@ def make_folder(folder: Path) -> None:
 def temporary_path(path: Path) -> Path:
     """A fresh name in the folder of `path`; `blobs.Blobs.sweep` knows such names."""
     return path.with_name(f".{path.name}.{secrets.token_hex(8)}{TEMPORARY_SUFFIX}")
+
+
+@contextmanager
+def exclusive(path: Path) -> Iterator[None]:
+    """Holds the lock file <path>.lock: of all processes and threads only one is inside. A killed one lets go."""
+    lock = path.with_name(f"{path.name}.lock")
+    with storage_errors(lock):
+        handle = os.open(lock, os.O_RDWR | os.O_CREAT, 0o600)
+    try:
+        fcntl.flock(handle, fcntl.LOCK_EX)
+        yield
+    finally:
+        os.close(handle)
 
 
 def _write_temporary(path: Path, data: bytes, mode: int) -> Path:

@@ -13,7 +13,7 @@ import os
 import sqlite3
 import threading
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -23,7 +23,7 @@ from sqlalchemy.exc import DBAPIError
 from extractor.errors import InputError
 from service.errors import StorageFailed, Unavailable
 from service.store import schema
-from service.store.durable import make_folder, sync_folder
+from service.store.durable import exclusive, make_folder, sync_folder
 from service.store.statements import SqlReading, SqlTransaction
 
 _BUSY = (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED)
@@ -42,18 +42,22 @@ class SqliteStore:
         self._turn = threading.Lock()       # threads of one process queue here instead of polling SQLite's lock
         self._process = os.getpid()
         make_folder(path.parent)
-        new = not path.exists()
-        if new:
-            os.close(os.open(path, os.O_WRONLY | os.O_CREAT, 0o600))
         self._engine = create_engine(
             f"sqlite:///{path}", pool_size=_POOL, max_overflow=-1, hide_parameters=True,
             connect_args={"timeout": wait_s, "check_same_thread": False}, json_serializer=_json_text)
         event.listen(self._engine, "connect", self._prepare)
         event.listen(self._engine, "begin", _begin)
-        with _translated(), self._connected(writing=True) as connection:
-            self._make_tables(connection)
-        if new:
-            sync_folder(path.parent)
+        # One process at a time: SQLite answers "locked" at once, time-out or not, to two that switch to WAL together.
+        with _translated(), exclusive(path):
+            new = not path.exists()
+            if new:
+                os.close(os.open(path, os.O_WRONLY | os.O_CREAT, 0o600))
+            with closing(sqlite3.connect(path, timeout=wait_s)) as raw:
+                raw.execute("PRAGMA journal_mode = WAL")        # stays with the file
+            with self._connected(writing=True) as connection:
+                self._make_tables(connection)
+            if new:
+                sync_folder(path.parent)
 
     @contextmanager
     def read(self) -> Iterator[SqlReading]:
@@ -103,7 +107,7 @@ class SqliteStore:
 
     def _prepare(self, raw: Any, record: Any) -> None:
         raw.isolation_level = None          # transactions begin in _begin, not by the driver's guess
-        for pragma in ("journal_mode = WAL", "synchronous = FULL", "secure_delete = ON", "foreign_keys = ON"):
+        for pragma in ("synchronous = FULL", "secure_delete = ON", "foreign_keys = ON"):
             raw.execute(f"PRAGMA {pragma}")
 
     def _make_tables(self, connection: Connection) -> None:
@@ -134,13 +138,14 @@ def _translated() -> Iterator[None]:
     """Trouble of the database in the service's words; the statement's values never enter a message."""
     try:
         yield
-    except DBAPIError as fault:
-        code = getattr(fault.orig, "sqlite_errorcode", 0) & 0xFF
+    except (DBAPIError, sqlite3.Error) as fault:
+        original = fault.orig if isinstance(fault, DBAPIError) else fault
+        code = getattr(original, "sqlite_errorcode", 0) & 0xFF
         if code in _BUSY:
             raise Unavailable("the database is busy", code="store-busy", retry_after_s=1.0) from fault
         if code == sqlite3.SQLITE_FULL:
             raise Unavailable("the data disk is full", code="disk-full", retry_after_s=60.0) from fault
         if code in (sqlite3.SQLITE_IOERR, sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB, sqlite3.SQLITE_CANTOPEN,
                     sqlite3.SQLITE_READONLY):
-            raise StorageFailed(f"the database failed: {fault.orig}", code="store-failed") from fault
+            raise StorageFailed(f"the database failed: {original}", code="store-failed") from fault
         raise

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import resource
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
@@ -14,7 +15,7 @@ from extractor.errors import Defect, InputError
 from service.custody.run_keys import RunKeys
 from service.custody.tokens import SCOPES, Identity, identify, new_token
 from service.custody.vault import VaultReader, read_vault, write_vault
-from service.errors import DamagedFile, KeyErased, Unavailable
+from service.errors import DamagedFile, KeyErased, StorageFailed, Unavailable
 from service.store import blobs
 from service.store.blobs import Blobs
 from service.store.durable import create_durably, temporary_path, write_durably
@@ -254,6 +255,34 @@ def test_durable_writing_replaces_and_creating_does_not(tmp_path: Path) -> None:
     assert not create_durably(path, b"three") and path.read_bytes().startswith(b"two")
     assert create_durably(tmp_path / "y", b"four") and (tmp_path / "y").read_bytes() == b"four"
     assert sorted(one.name for one in tmp_path.iterdir()) == ["x", "y"]
+
+
+def test_a_disk_that_stops_writing_is_told_and_leaves_what_was_there(tmp_path: Path) -> None:
+    """With a real limit on file sizes: no half file appears, no leftover stays, acknowledged rows are still there."""
+    store = SqliteStore(tmp_path / "bellassay.sqlite")
+    with store.write() as transaction:
+        transaction.insert_declaration(declaration())
+    write_durably(tmp_path / "x", b"before")
+    write_vault(tmp_path / "bits", bytes(32), "bits", b"before")
+    files = sorted(tmp_path.iterdir())
+    soft, hard = resource.getrlimit(resource.RLIMIT_FSIZE)
+    resource.setrlimit(resource.RLIMIT_FSIZE, (300_000, hard))
+    try:
+        with pytest.raises(StorageFailed):
+            write_durably(tmp_path / "x", bytes(400_000))
+        with pytest.raises(StorageFailed):
+            write_vault(tmp_path / "bits", bytes(32), "bits", bytes(400_000))
+        with pytest.raises((StorageFailed, Unavailable)), store.write() as transaction:
+            transaction.insert_run(run("r1"))
+            transaction.append_event("r1", {"text": "x" * 400_000})
+    finally:
+        resource.setrlimit(resource.RLIMIT_FSIZE, (soft, hard))
+    assert sorted(tmp_path.iterdir()) == files and (tmp_path / "x").read_bytes() == b"before"
+    assert read_vault(tmp_path / "bits", bytes(32), "bits") == b"before"
+    with store.write() as transaction:
+        assert transaction.get_declaration("d1") and transaction.get_run("r1") is None
+        transaction.insert_run(run("r1"))
+    store.close()
 
 
 def _umask() -> int:
