@@ -71,7 +71,8 @@ def test_bytes_inserted_removed_and_swapped(kind):
 def test_noise():
     """Random bytes behind each of the marks are refused."""
     rng = np.random.default_rng(11)
-    marks = (b"PK\x03\x04", b"PK\x05\x06", b"\x93NUMPY\x01\x00", b"\x93NUMPY", b"x,y,a,b,t\n", b"round,x,y,a,b,t\r\n", b"")
+    marks = (b"PK\x03\x04", b"PK\x05\x06", b"\x93NUMPY\x01\x00", b"\x93NUMPY", b"x,y,a,b,t\n",
+             b"round,x,y,a,b,t\r\n", b"")
     for mark in marks:
         for length in (0, 1, 10, 100, 1_000):
             for _ in range(20):
