@@ -8,9 +8,11 @@ Cells. A cell is a value of (t, x, y, a, b); its index is 16 t + 8 x + 4 y + 2 a
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from fractions import Fraction
 
 import numpy as np
 
@@ -182,6 +184,29 @@ class Settings:
     @property
     def uniform(self) -> bool:
         return self.distribution == (0.25,) * 4 and self.bias == 0.0
+
+    def allowed(self) -> tuple[tuple[Fraction, Fraction, Fraction, Fraction], ...]:
+        """Extreme points of the test settings' allowed distributions, exact, each summing to 1, ordered like `distribution`.
+
+        With a bias tau, P(first bit) and P(second bit | first) may each move by up to tau, with either station's bit first;
+        the convex hull of these points holds every distribution the declaration allows. Raises InputError if a setting
+        could stop varying, because then local boxes could win every round.
+        """
+        total = sum(map(Fraction, self.distribution))
+        p00, p01, p10, p11 = (Fraction(p) / total for p in self.distribution)
+        if self.bias == 0:
+            return ((p00, p01, p10, p11),)
+        tau = Fraction(self.bias)
+        found: dict[tuple[Fraction, ...], None] = {}
+        for (p, q, r, s), x_first in (((p00, p01, p10, p11), True), ((p00, p10, p01, p11), False)):
+            for signs in itertools.product((-tau, tau), repeat=3):
+                u, v, w = (chance + sign for chance, sign in zip((p + q, p / (p + q), r / (r + s)), signs))
+                if not all(0 < chance < 1 for chance in (u, v, w)):
+                    raise InputError("a setting could stop varying at this bias; lower the bias or use a more even distribution",
+                                     code="bias-too-large", field="/settings/bias")
+                p0, p1, p2, p3 = u * v, u * (1 - v), (1 - u) * w, (1 - u) * (1 - w)
+                found[(p0, p1, p2, p3) if x_first else (p0, p2, p1, p3)] = None
+        return tuple(found)
 
 
 @dataclass(frozen=True)

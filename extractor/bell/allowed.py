@@ -8,7 +8,6 @@ interval.
 
 from __future__ import annotations
 
-import itertools
 import math
 from dataclasses import dataclass
 
@@ -20,33 +19,8 @@ CONTRADICTION_LOG = math.log(1e-6)      # common practice: one false alarm in a 
 
 
 def allowed_distributions(settings: Settings) -> tuple[tuple[float, float, float, float], ...]:
-    """Extreme points of the allowed P(x, y | t = 1), each ordered (0,0), (0,1), (1,0), (1,1).
-
-    A conditional chance is clipped to 1; one that could reach 0 is an InputError, because then a pair need not
-    come up at all and a local strategy could win every round.
-    """
-    if settings.bias == 0.0:
-        return (tuple(settings.distribution),)
-    p, tau = settings.distribution, settings.bias
-    found: dict[tuple[float, float, float, float], None] = {}
-    for swapped in (False, True):
-        table = ((p[0], p[2]), (p[1], p[3])) if swapped else ((p[0], p[1]), (p[2], p[3]))
-        first = sum(table[0])
-        later = [row[0] / sum(row) for row in table]
-        for signs in itertools.product((-tau, tau), repeat=3):
-            head = _shifted(first, signs[0])
-            tails = [_shifted(chance, sign) for chance, sign in zip(later, signs[1:])]
-            joint = (head * tails[0], head * (1 - tails[0]), (1 - head) * tails[1], (1 - head) * (1 - tails[1]))
-            found[(joint[0], joint[2], joint[1], joint[3]) if swapped else joint] = None
-    return tuple(found)
-
-
-def _shifted(chance: float, shift: float) -> float:
-    moved = min(1.0, max(0.0, chance + shift))
-    if moved in (0.0, 1.0):
-        raise InputError("a setting bit could stop varying at this bias; lower it or use a more even distribution",
-                         code="bias-too-large", field="/settings/bias")
-    return moved
+    """`Settings.allowed` as floats. Raises InputError if the bias is too large."""
+    return tuple(tuple(map(float, point)) for point in settings.allowed())
 
 
 def local_win_limit(settings: Settings) -> float:

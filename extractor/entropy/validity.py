@@ -15,29 +15,9 @@ from extractor.entropy.single_round import renyi_power, renyi_power_slope
 from extractor.model import SETTING_PAIRS, Convention, ScoreTable, Settings
 
 
-def allowed_distributions(settings: Settings) -> list[tuple[Decimal, Decimal, Decimal, Decimal]]:
-    """Extreme points of the test settings' allowed distributions, each summing to 1 exactly as far as arithmetic goes.
-
-    bias = tau: P(first bit) and P(second bit | first) may each move by up to tau, with either side first; the convex hull of
-    these points holds every distribution the declaration allows. Raises InputError if a probability could reach 0.
-    """
-    total = sum(map(number, settings.distribution))
-    base = [number(p) / total for p in settings.distribution]
-    if settings.bias == 0:
-        return [tuple(base)]
-    tau = number(settings.bias)
-    points = []
-    for order in ((0, 1, 2, 3), (0, 2, 1, 3)):                 # x first, then y first
-        p = [base[i] for i in order]
-        first, left, right = p[0] + p[1], p[0] / (p[0] + p[1]), p[2] / (p[2] + p[3])
-        for signs in range(8):
-            u, v, w = (q + (tau if signs >> k & 1 else -tau) for k, q in enumerate((first, left, right)))
-            if not all(ZERO < q < ONE for q in (u, v, w)):
-                raise InputError(f"a bias of {settings.bias!r} would let a setting never occur; declare a smaller one",
-                                 code="bias-too-large", field="/settings/bias")
-            moved = (u * v, u * (ONE - v), (ONE - u) * w, (ONE - u) * (ONE - w))
-            points.append(tuple(moved[order.index(i)] for i in range(4)))
-    return points
+def allowed_distributions(settings: Settings) -> list[tuple[Decimal, ...]]:
+    """`Settings.allowed` as decimals. Raises InputError if the bias is too large."""
+    return [tuple(Decimal(q.numerator) / Decimal(q.denominator) for q in point) for point in settings.allowed()]
 
 
 def win_lose_factors(table: ScoreTable, convention: Convention) -> tuple[list[Decimal], Decimal, Decimal]:

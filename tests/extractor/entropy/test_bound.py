@@ -156,7 +156,7 @@ def test_methods_say_what_they_do_not_cover():
         for changes in (dict(settings=Settings(bias=0.01)), dict(settings=Settings(distribution=(0.26, 0.24, 0.25, 0.25))), dict(output_rule="credit")):
             with pytest.raises(InputError, match="factor-closed"):
                 declared(method, **changes)
-    with pytest.raises(InputError, match="never occur"):
+    with pytest.raises(InputError, match="stop varying"):
         declared(settings=Settings(distribution=(0.05, 0.45, 0.05, 0.45), bias=0.2))
 
 
