@@ -45,8 +45,13 @@ class Demo:
         """Run one command; its JSON result. Progress goes to the terminal as it comes."""
         words = tuple(str(word) for word in words)
         say(f"\n$ bellassay {shlex.join(words)}")
-        done = subprocess.run([sys.executable, "-m", "service.cli", *words, *(["--json"] if json_result else [])],
-                              env=self.env, cwd=self.job, stdout=subprocess.PIPE if json_result else None, text=True)
+        done = subprocess.run(
+            [sys.executable, "-m", "service.cli", *words, *(["--json"] if json_result else [])],
+            env=self.env,
+            cwd=self.job,
+            stdout=subprocess.PIPE if json_result else None,
+            text=True,
+        )
         if done.returncode:
             raise Stopped(f"bellassay {words[0]} ended with exit code {done.returncode}")
         return json.loads(done.stdout) if json_result else {}
@@ -56,8 +61,24 @@ class Demo:
         """A service on a free port for as long as the block lasts; its address."""
         say(f"\n$ bellassay serve --data {shlex.quote(str(self.data / 'service'))} --port 0 &")
         with open(self.job / "service.log", "wb") as log:
-            process = subprocess.Popen([sys.executable, "-m", "service.cli", "serve", "--data", str(self.data / "service"),
-                                        "--port", "0", "--json"], env=self.env, cwd=self.job, stdout=subprocess.PIPE, stderr=log, text=True)
+            process = subprocess.Popen(
+                [
+                    sys.executable,
+                    "-m",
+                    "service.cli",
+                    "serve",
+                    "--data",
+                    str(self.data / "service"),
+                    "--port",
+                    "0",
+                    "--json",
+                ],
+                env=self.env,
+                cwd=self.job,
+                stdout=subprocess.PIPE,
+                stderr=log,
+                text=True,
+            )
         try:
             line = process.stdout.readline()
             if not line:
@@ -77,8 +98,19 @@ class Demo:
         with self.service() as url:
             self.env["BELLASSAY_URL"] = url
             say(f"the service listens on {url}")
-            token = self.command("token", "create", "demo", "--scope", "submit", "--scope", "collect", "--scope", "audit",
-                                 "--data", self.data / "service")
+            token = self.command(
+                "token",
+                "create",
+                "demo",
+                "--scope",
+                "submit",
+                "--scope",
+                "collect",
+                "--scope",
+                "audit",
+                "--data",
+                self.data / "service",
+            )
             self.env["BELLASSAY_TOKEN"] = token["token"]
 
             say("\nFirst the calibration: earlier rounds, which never become part of the run.")
@@ -87,22 +119,60 @@ class Demo:
             (self.job / "calibration.json").write_text(json.dumps(counts))
 
             say("\nThe declaration is recorded before the first round of the run exists.")
-            declared = self.command("declare", "--rig", RIG, "--purpose", "demo", "--rounds", rounds, "--calibration", "calibration.json",
-                                    "--method", "factor-closed", "--output-rule", "credit", "--soundness", "1e-10",
-                                    "--out", "declaration.json", "--post")
+            declared = self.command(
+                "declare",
+                "--rig",
+                RIG,
+                "--purpose",
+                "demo",
+                "--rounds",
+                rounds,
+                "--calibration",
+                "calibration.json",
+                "--method",
+                "factor-closed",
+                "--output-rule",
+                "credit",
+                "--soundness",
+                "1e-10",
+                "--out",
+                "declaration.json",
+                "--post",
+            )
             say(f"recorded at {declared['recorded']['time']} as {declared['recorded']['id']}")
 
             say("\nNow the rounds are taken.")
-            simulated = self.command("simulate", "--rounds", rounds, "--segments", segments, *OPTIONS,
-                                     "--seed", int.from_bytes(os.urandom(4), "big"), "--out", "rounds")
+            simulated = self.command(
+                "simulate",
+                "--rounds",
+                rounds,
+                "--segments",
+                segments,
+                *OPTIONS,
+                "--seed",
+                int.from_bytes(os.urandom(4), "big"),
+                "--out",
+                "rounds",
+            )
             files = [f"rounds/{item['file']}" for item in simulated["files"]]
             run = self.command("submit", *files, "--declaration", declared["recorded"]["id"], "--watch")
             if run["state"] != "certified":
                 raise Stopped(f"the run ended as {run['state']}: {run['message']}")
             self.command("collect", run["id"], "--out", "collected")
             say("\nThe auditor's part, without the service:")
-            self.command("verify", "collected/bundle.zip", "--rounds", *files, "--seed", "collected/seed.bin", "--bits", "collected/bits.bin",
-                         "--bits-salt", "collected/bits-salt.hex", json_result=False)
+            self.command(
+                "verify",
+                "collected/bundle.zip",
+                "--rounds",
+                *files,
+                "--seed",
+                "collected/seed.bin",
+                "--bits",
+                "collected/bits.bin",
+                "--bits-salt",
+                "collected/bits-salt.hex",
+                json_result=False,
+            )
             self.summary(run, simulated)
             if self.args.keep:
                 say(f"\nThe service goes on at {url} until you press Ctrl-C. Token:\n  {token['token']}")
@@ -129,7 +199,11 @@ class Demo:
         ]
         print()
         for name, value in lines:
-            print(f"{name:<18}{value}".replace(",", " ") if name in ("rounds", "credit", "penalty", "certified length") else f"{name:<18}{value}")
+            print(
+                f"{name:<18}{value}".replace(",", " ")
+                if name in ("rounds", "credit", "penalty", "certified length")
+                else f"{name:<18}{value}"
+            )
         sys.stdout.flush()
 
 
@@ -153,12 +227,20 @@ def whole(text: str) -> int:
 
 
 def main() -> int:
-    parser = argparse.ArgumentParser(prog="deploy/demo", allow_abbrev=False,
-                                     description="The whole job on an invented rig, against a service of its own.")
+    parser = argparse.ArgumentParser(
+        prog="deploy/demo",
+        allow_abbrev=False,
+        description="The whole job on an invented rig, against a service of its own.",
+    )
     parser.add_argument("--rounds", type=whole, default=10**8, metavar="N", help="rounds of the run (default 1e8)")
     parser.add_argument("--segments", type=whole, default=4, metavar="S", help="files they are taken in (default 4)")
-    parser.add_argument("--data", type=Path, default=ROOT / "demo-data", metavar="DIR",
-                        help="folder for everything; each demo makes a new job folder there (default: demo-data of the project)")
+    parser.add_argument(
+        "--data",
+        type=Path,
+        default=ROOT / "demo-data",
+        metavar="DIR",
+        help="folder for everything; each demo makes a new job folder there (default: demo-data of the project)",
+    )
     parser.add_argument("--keep", action="store_true", help="leave the service running at the end, until Ctrl-C")
     try:
         Demo(parser.parse_args()).run()

@@ -24,7 +24,15 @@ from urllib.parse import quote
 import requests
 
 from service.transport import (
-    ATTEMPTS, DEFAULT_URL, FIRST_PAUSE_S, Progress, ServiceProblem, Transport, parse_events, sha256_of, unreachable,
+    ATTEMPTS,
+    DEFAULT_URL,
+    FIRST_PAUSE_S,
+    Progress,
+    ServiceProblem,
+    Transport,
+    parse_events,
+    sha256_of,
+    unreachable,
 )
 
 __all__ = ["Client", "DEFAULT_URL", "FINAL_STATES", "Progress", "ServiceProblem", "sha256_of"]
@@ -42,15 +50,24 @@ class Client:
     Errors raised by every method: ServiceProblem.
     """
 
-    def __init__(self, url: str = DEFAULT_URL, token: str | None = None, *, verify: bool | str = True,
-                 attempts: int = ATTEMPTS, sleep: Callable[[float], None] = time.sleep) -> None:
+    def __init__(
+        self,
+        url: str = DEFAULT_URL,
+        token: str | None = None,
+        *,
+        verify: bool | str = True,
+        attempts: int = ATTEMPTS,
+        sleep: Callable[[float], None] = time.sleep,
+    ) -> None:
         self._line, self._sleep = Transport(url, token, verify, attempts, sleep), sleep
 
     # ---- declarations, runs, planning
 
     def declare(self, document: dict) -> dict:
         """Record a declaration: {"id", "digest", "time", "ledger_index", "declaration"}."""
-        return self._line.json("POST", "/v1/declarations", json=document, headers={"Idempotency-Key": str(uuid.uuid4())})
+        return self._line.json(
+            "POST", "/v1/declarations", json=document, headers={"Idempotency-Key": str(uuid.uuid4())}
+        )
 
     def declaration(self, declaration: str) -> dict:
         return self._line.json("GET", f"/v1/declarations/{quote(declaration, safe='')}")
@@ -73,8 +90,9 @@ class Client:
         """What has arrived: {"segments": [...], "rounds": N}."""
         return self._line.json("GET", self._path(run, "segments"))
 
-    def put_segment(self, run: str, k: int, path: str | Path, progress: Progress | None = None,
-                    digest: bytes | None = None) -> dict:
+    def put_segment(
+        self, run: str, k: int, path: str | Path, progress: Progress | None = None, digest: bytes | None = None
+    ) -> dict:
         """Upload segment k = 1, 2, ... from a round file; `digest` is its SHA-256 if already known.
 
         Before every further attempt the service is asked what has arrived, so nothing is sent twice; progress is
@@ -84,8 +102,14 @@ class Client:
         target = self._path(run, f"segments/{k}")
 
         def arrived() -> dict | None:
-            return next((s for s in self.segments(run)["segments"] if s["segment"] == k
-                         and s["digest"] == "sha256:" + digest.hex()), None)
+            return next(
+                (
+                    s
+                    for s in self.segments(run)["segments"]
+                    if s["segment"] == k and s["digest"] == "sha256:" + digest.hex()
+                ),
+                None,
+            )
 
         return self._line.upload(target, path, digest, progress, arrived, {"name": Path(path).name})
 
@@ -161,7 +185,9 @@ class Client:
 
     def collect(self, run: str, digest: bytes) -> dict:
         """Confirm that the bits with this SHA-256 are safely stored: the service erases its key. Never repeated."""
-        return self._line.json("POST", self._path(run, "collection"), json={"digest": "sha256:" + digest.hex()}, repeat=False)
+        return self._line.json(
+            "POST", self._path(run, "collection"), json={"digest": "sha256:" + digest.hex()}, repeat=False
+        )
 
     def ledger_key(self) -> str:
         """The text of the key that signs the ledger."""

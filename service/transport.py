@@ -22,13 +22,13 @@ from extractor.errors import Defect
 
 DEFAULT_URL = "http://127.0.0.1:8383"
 CHUNK_BYTES = 1 << 20
-ATTEMPTS = 6                            # per request, the first included
+ATTEMPTS = 6  # per request, the first included
 FIRST_PAUSE_S, LONGEST_PAUSE_S, LONGEST_ASKED_PAUSE_S = 0.25, 8.0, 60
 CONNECT_TIMEOUT_S, READ_TIMEOUT_S = 10.0, 120.0
-LONGEST_TEXT_BYTES = 64 << 20           # a document (report, certificate, problem) larger than this is not one of ours
+LONGEST_TEXT_BYTES = 64 << 20  # a document (report, certificate, problem) larger than this is not one of ours
 BUSY = (408, 429, 502, 503, 504)
 
-Progress = Callable[[int], None]        # called with the number of bytes that have gone by since the last call
+Progress = Callable[[int], None]  # called with the number of bytes that have gone by since the last call
 
 
 class ServiceProblem(Exception):
@@ -39,8 +39,15 @@ class ServiceProblem(Exception):
     retry_after_s  seconds the service asks to wait before trying again, None if it says nothing
     """
 
-    def __init__(self, code: str, title: str, detail: str = "", errors: tuple[dict, ...] = (), status: int = 0,
-                 retry_after_s: int | None = None) -> None:
+    def __init__(
+        self,
+        code: str,
+        title: str,
+        detail: str = "",
+        errors: tuple[dict, ...] = (),
+        status: int = 0,
+        retry_after_s: int | None = None,
+    ) -> None:
         self.code, self.title, self.detail, self.errors, self.status = code, title, detail, errors, status
         self.retry_after_s = retry_after_s
         super().__init__(detail or title)
@@ -122,8 +129,9 @@ class Transport:
     Errors raised by every method: ServiceProblem.
     """
 
-    def __init__(self, url: str, token: str | None, verify: bool | str, attempts: int,
-                 sleep: Callable[[float], None]) -> None:
+    def __init__(
+        self, url: str, token: str | None, verify: bool | str, attempts: int, sleep: Callable[[float], None]
+    ) -> None:
         parts = urlsplit(url)
         if parts.scheme not in ("http", "https") or not parts.hostname:
             raise ServiceProblem("bad-url", f"{url!r} is not an address such as {DEFAULT_URL}")
@@ -131,15 +139,18 @@ class Transport:
         self._session = requests.Session()
         self._session.auth = _Bearer(token)
         if is_this_machine(parts.hostname):
-            self._session.trust_env = False     # a proxy for the outside world cannot reach this machine's services
+            self._session.trust_env = False  # a proxy for the outside world cannot reach this machine's services
 
     def json(self, method: str, path: str, **options: Any) -> dict:
         with self.send(method, path, **options) as answer:
             try:
                 return answer.json()
             except ValueError:
-                raise ServiceProblem("not-json", f"{self.url} did not answer in JSON: is this a bellassay service?",
-                                     status=answer.status_code) from None
+                raise ServiceProblem(
+                    "not-json",
+                    f"{self.url} did not answer in JSON: is this a bellassay service?",
+                    status=answer.status_code,
+                ) from None
 
     def bytes(self, path: str, headers: dict | None = None) -> bytes:
         with self.send("GET", path, headers=headers or {}) as answer:
@@ -154,8 +165,13 @@ class Transport:
             last = attempt == self._attempts or not repeat
             try:
                 answer = self._session.request(
-                    method, self.url + path, timeout=(CONNECT_TIMEOUT_S, READ_TIMEOUT_S), verify=self._verify,
-                    allow_redirects=False, **options)
+                    method,
+                    self.url + path,
+                    timeout=(CONNECT_TIMEOUT_S, READ_TIMEOUT_S),
+                    verify=self._verify,
+                    allow_redirects=False,
+                    **options,
+                )
             except requests.RequestException as fault:
                 if last or isinstance(fault, (requests.exceptions.SSLError, requests.exceptions.InvalidHeader)):
                     raise unreachable(self.url, fault) from None
@@ -174,8 +190,15 @@ class Transport:
         pause_s = min(FIRST_PAUSE_S * 2 ** (attempt - 1), LONGEST_PAUSE_S)
         self._sleep(max(pause_s, min(asked_s or 0, LONGEST_ASKED_PAUSE_S)))
 
-    def upload(self, target: str, path: str | Path, digest: bytes, progress: Progress | None,
-               arrived: Callable[[], dict | None], query: dict) -> dict:
+    def upload(
+        self,
+        target: str,
+        path: str | Path,
+        digest: bytes,
+        progress: Progress | None,
+        arrived: Callable[[], dict | None],
+        query: dict,
+    ) -> dict:
         """PUT a file with its digest. `arrived` asks the service, before each further attempt, whether it is there."""
         headers = {"Content-Digest": digest_field(digest), "Content-Type": "application/octet-stream"}
         place = _Place(progress)
@@ -183,8 +206,9 @@ class Transport:
             with open(path, "rb") as file:
                 body = _Body(file, place)
                 try:
-                    answer = self.json("PUT", target, params=query, repeat=False, headers=headers,
-                                       data=body if len(body) else b"")
+                    answer = self.json(
+                        "PUT", target, params=query, repeat=False, headers=headers, data=body if len(body) else b""
+                    )
                     place.move_to(len(body))
                     return answer
                 except ServiceProblem as problem:
@@ -198,8 +222,9 @@ class Transport:
             place.move_to(0)
         raise Defect("an upload needs at least one attempt")
 
-    def download(self, target: str, path: str | Path, progress: Progress | None,
-                 secret: bool = False) -> tuple[bytes, Any]:
+    def download(
+        self, target: str, path: str | Path, progress: Progress | None, secret: bool = False
+    ) -> tuple[bytes, Any]:
         """GET into path + ".part", resumed by Range, renamed when whole; (SHA-256, headers)."""
         path, place = Path(path), _Place(progress)
         part = path.with_name(path.name + ".part")
@@ -209,7 +234,7 @@ class Transport:
                 headers, resumed = self._fetch(target, part, have, place, secret)
             except ServiceProblem as problem:
                 if problem.status == 416 and have:
-                    part.unlink()               # what lies here is longer than what the service has: begin again
+                    part.unlink()  # what lies here is longer than what the service has: begin again
                 elif problem.code != "unreachable" or attempt == self._attempts:
                     raise
                 self._pause(attempt, problem.retry_after_s)
@@ -276,12 +301,22 @@ def _problem_of(answer: requests.Response) -> ServiceProblem:
         except ValueError:
             body = None
     if not isinstance(body, dict):
-        return ServiceProblem("unexpected-answer", f"{answer.url} answered {answer.status_code} {answer.reason}",
-                              status=answer.status_code, retry_after_s=retry_after_s)
+        return ServiceProblem(
+            "unexpected-answer",
+            f"{answer.url} answered {answer.status_code} {answer.reason}",
+            status=answer.status_code,
+            retry_after_s=retry_after_s,
+        )
     errors = tuple(e for e in body.get("errors") or () if isinstance(e, dict))
     title = str(body.get("title") or answer.reason)
-    return ServiceProblem(str(body.get("code") or "problem"), title, str(body.get("detail") or ""), errors,
-                          answer.status_code, retry_after_s)
+    return ServiceProblem(
+        str(body.get("code") or "problem"),
+        title,
+        str(body.get("detail") or ""),
+        errors,
+        answer.status_code,
+        retry_after_s,
+    )
 
 
 def parse_events(pieces: Iterable[bytes]) -> Iterator[tuple[str | None, dict]]:

@@ -21,7 +21,7 @@ from extractor.errors import InputError
 DONE, REFUSED, BAD_INPUT = 0, 1, 2
 WIDTH = 80
 LARGEST_DOCUMENT_BYTES = 64 << 20
-SPARSE_LINE_S = 10.0                     # between progress lines when stderr is not a terminal
+SPARSE_LINE_S = 10.0  # between progress lines when stderr is not a terminal
 
 
 class _Help(argparse.RawDescriptionHelpFormatter):
@@ -36,19 +36,30 @@ class Parser(argparse.ArgumentParser):
         super().__init__(formatter_class=_Help, allow_abbrev=False, **options)
 
 
-def add_command(commands: Any, name: str, run: Callable[[argparse.Namespace], int], summary: str, paragraph: str,
-                example: str, *, prints_result: bool = True) -> Parser:
+def add_command(
+    commands: Any,
+    name: str,
+    run: Callable[[argparse.Namespace], int],
+    summary: str,
+    paragraph: str,
+    example: str,
+    *,
+    prints_result: bool = True,
+) -> Parser:
     """A command with one paragraph and an example in its --help."""
     text = textwrap.fill(" ".join(paragraph.split()), WIDTH - 2)
     lines = "\n".join("  " + line for line in textwrap.dedent(example).strip().splitlines())
     parser = commands.add_parser(name, help=summary, description=text, epilog=f"example:\n{lines}")
     parser.set_defaults(run=run)
     if prints_result:
-        parser.add_argument("--json", action="store_true", help="print one JSON object on standard output, all else on standard error")
+        parser.add_argument(
+            "--json", action="store_true", help="print one JSON object on standard output, all else on standard error"
+        )
     return parser
 
 
 # ---- option types
+
 
 def whole(text: str) -> int:
     """A whole number, also written as 1e8."""
@@ -90,6 +101,7 @@ def four_probabilities(text: str) -> tuple[float, float, float, float]:
 
 # ---- files
 
+
 def read_bytes(path: str | Path, largest: int = LARGEST_DOCUMENT_BYTES) -> bytes:
     """A whole small file. Errors raised: InputError if it is larger than it can sensibly be; OSError."""
     with open(path, "rb") as file:
@@ -106,7 +118,9 @@ def read_json(path: str | Path) -> Any:
     try:
         return canonical.parse(read_bytes(path))
     except InputError as fault:
-        raise InputError(fault.message, code=fault.code, file=fault.file or str(path), row=fault.row, field=fault.field) from None
+        raise InputError(
+            fault.message, code=fault.code, file=fault.file or str(path), row=fault.row, field=fault.field
+        ) from None
 
 
 def read_declaration(path: str | Path) -> Any:
@@ -116,7 +130,9 @@ def read_declaration(path: str | Path) -> Any:
     try:
         return declaration_from(read_json(path))
     except InputError as fault:
-        raise InputError(fault.message, code=fault.code, file=fault.file or str(path), row=fault.row, field=fault.field) from None
+        raise InputError(
+            fault.message, code=fault.code, file=fault.file or str(path), row=fault.row, field=fault.field
+        ) from None
 
 
 def write_file(path: Path, data: bytes, *, secret: bool = False, replace: bool = True) -> None:
@@ -140,6 +156,7 @@ def json_bytes(document: Any) -> bytes:
 
 
 # ---- output
+
 
 def note(text: str = "") -> None:
     """A remark for the person at the terminal."""
@@ -171,8 +188,13 @@ def rows(pairs: Iterable[tuple[str, object]]) -> list[str]:
 
 def bullets(sentences: Iterable[str]) -> list[str]:
     """Sentences as an indented list."""
-    return [line for sentence in sentences
-            for line in textwrap.wrap(sentence, WIDTH, initial_indent="  - ", subsequent_indent="    ", break_on_hyphens=False)]
+    return [
+        line
+        for sentence in sentences
+        for line in textwrap.wrap(
+            sentence, WIDTH, initial_indent="  - ", subsequent_indent="    ", break_on_hyphens=False
+        )
+    ]
 
 
 def grouped(number: int) -> str:
@@ -202,7 +224,9 @@ class Progress:
         if sys.stderr.isatty():
             from tqdm import tqdm
 
-            self._bar = tqdm(total=total, desc=label, unit=unit, unit_scale=True, ncols=WIDTH - 1, leave=True, file=sys.stderr)
+            self._bar = tqdm(
+                total=total, desc=label, unit=unit, unit_scale=True, ncols=WIDTH - 1, leave=True, file=sys.stderr
+            )
 
     def advance(self, amount: int) -> None:
         self._at += amount
@@ -220,6 +244,8 @@ class Progress:
     def __enter__(self) -> Progress:
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, fault: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, fault: BaseException | None, trace: TracebackType | None
+    ) -> None:
         if self._bar is not None:
             self._bar.close()

@@ -4,14 +4,28 @@ from __future__ import annotations
 
 import argparse
 import os
+import sys
+import textwrap
 from collections.abc import Iterator
+from contextlib import ExitStack
 from pathlib import Path
 from typing import Any
 
-from extractor.errors import Defect, InputError
+from extractor.errors import Defect, InputError, ProofError
 from extractor.model import Certificate, Declaration, RoundBatch
 from service.commands.common import (
-    DONE, REFUSED, Progress, add_command, bullets, emit, grouped, note, read_bytes, read_declaration, rows, whole,
+    DONE,
+    REFUSED,
+    WIDTH,
+    Progress,
+    add_command,
+    bullets,
+    emit,
+    grouped,
+    read_bytes,
+    read_declaration,
+    rows,
+    whole,
     write_file,
 )
 from service.commands.rounds import opened
@@ -22,24 +36,41 @@ LARGEST_BUNDLE_BYTES = 1 << 30
 
 def add(commands: Any) -> None:
     parser = add_command(
-        commands, "certify", certify, "the whole chain on files, without a service",
+        commands,
+        "certify",
+        certify,
+        "the whole chain on files, without a service",
         """Reads the rounds, tallies them, certifies a length under the declaration and extracts the bits, all on this
         machine. Writes certificate.json, bits.bin and, unless one was given, the seed it drew from the operating
         system (seed.bin). There is no ledger here: nobody but you can tell what was declared when. Exit code 1 and no
         bits when the run earns too little.""",
         """
         bellassay certify rounds-*.npz --declaration run7.json --out run7/
-        """)
+        """,
+    )
     parser.add_argument("files", nargs="+", metavar="FILE", help="round files, in the order they were taken")
-    parser.add_argument("--declaration", required=True, metavar="D.json", help="the declaration the rounds were taken under")
-    parser.add_argument("--seed", metavar="S.bin",
-                        help="uniform seed bits, least significant bit first, of exactly the length the certificate asks for")
-    parser.add_argument("--threads", type=whole, default=os.cpu_count() or 1, metavar="T",
-                        help="threads of the hash (default: one per processor)")
+    parser.add_argument(
+        "--declaration", required=True, metavar="D.json", help="the declaration the rounds were taken under"
+    )
+    parser.add_argument(
+        "--seed",
+        metavar="S.bin",
+        help="uniform seed bits, least significant bit first, of exactly the length the certificate asks for",
+    )
+    parser.add_argument(
+        "--threads",
+        type=whole,
+        default=os.cpu_count() or 1,
+        metavar="T",
+        help="threads of the hash (default: one per processor)",
+    )
     parser.add_argument("--out", required=True, metavar="DIR", help="folder for the results; made if missing")
 
     parser = add_command(
-        commands, "verify", verify, "check a bundle, offline",
+        commands,
+        "verify",
+        verify,
+        "check a bundle, offline",
         """Checks the bundle of a run without asking anybody: signatures and proofs of the ledger, the declaration's
         place before the seal, and the certificate, recomputed from declaration and tally. With the rounds, the seed
         and the bits at hand it also recounts and re-extracts everything. Prints each check as a sentence; exit code 1
@@ -47,13 +78,20 @@ def add(commands: Any) -> None:
         """
         bellassay verify bundle.zip --rounds rounds-*.npz --seed seed.bin \\
             --bits bits.bin --bits-salt bits-salt.hex
-        """)
+        """,
+    )
     parser.add_argument("bundle", metavar="BUNDLE", help="bundle file (zip) as collected")
-    parser.add_argument("--rounds", nargs="+", metavar="FILE", help="the round files of the run, in order: recounts them")
+    parser.add_argument(
+        "--rounds", nargs="+", metavar="FILE", help="the round files of the run, in order: recounts them"
+    )
     parser.add_argument("--seed", metavar="S.bin", help="the seed that was used")
     parser.add_argument("--bits", metavar="B.bin", help="the bits; with rounds and seed they are extracted again")
-    parser.add_argument("--bits-salt", metavar="HEX|FILE", help="salt of the commitment to the bits: 64 hexadecimal digits, or a file")
-    parser.add_argument("--key", metavar="K", help="the ledger's verifier key (text or file), got from somebody you trust")
+    parser.add_argument(
+        "--bits-salt", metavar="HEX|FILE", help="salt of the commitment to the bits: 64 hexadecimal digits, or a file"
+    )
+    parser.add_argument(
+        "--key", metavar="K", help="the ledger's verifier key (text or file), got from somebody you trust"
+    )
 
 
 def certify(args: argparse.Namespace) -> int:
@@ -65,14 +103,20 @@ def certify(args: argparse.Namespace) -> int:
     out = Path(args.out)
     for name in ("certificate.json", "bits.bin"):
         if (out / name).exists():
-            raise InputError("exists already: bits are made once; choose another folder", code="file-exists", file=str(out / name))
+            raise InputError(
+                "exists already: bits are made once; choose another folder", code="file-exists", file=str(out / name)
+            )
     with Progress("counting", declaration.rounds, "rounds") as progress:
         total, digest = pipeline.read_run(pipeline.batches_of(opened(args.files), declaration.rules), progress.move_to)
     certificate = pipeline.certify(declaration, total)
     document = certificate_document(certificate)
     out.mkdir(parents=True, exist_ok=True)
-    result: dict[str, Any] = {"outcome": certificate.outcome, "certificate": document, "records_digest": digest,
-                              "files": {"certificate": str(out / "certificate.json")}}
+    result: dict[str, Any] = {
+        "outcome": certificate.outcome,
+        "certificate": document,
+        "records_digest": digest,
+        "files": {"certificate": str(out / "certificate.json")},
+    }
     bits = None
     if certificate.certified_length:
         seed_path, drawn = _seed(args, certificate, out)
@@ -82,8 +126,11 @@ def certify(args: argparse.Namespace) -> int:
         result["files"]["seed"] = str(seed_path)
         result["seed_drawn"] = drawn
     write_file(out / "certificate.json", canonical.canonical_bytes(document))
-    emit(args, result, certificate_lines(certificate) + [""] + rows(
-        (name, path) for name, path in result["files"].items()))
+    emit(
+        args,
+        result,
+        certificate_lines(certificate) + [""] + rows((name, path) for name, path in result["files"].items()),
+    )
     return DONE if bits is not None else REFUSED
 
 
@@ -96,21 +143,25 @@ def _seed(args: argparse.Namespace, certificate: Certificate, out: Path) -> tupl
     try:
         handle = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o600)
     except FileExistsError:
-        raise InputError("exists already: a seed is used once; choose another folder", code="file-exists", file=str(path)) from None
+        raise InputError(
+            "exists already: a seed is used once; choose another folder", code="file-exists", file=str(path)
+        ) from None
     with os.fdopen(handle, "wb") as file:
         left = size
         while left:
             piece = bytearray(os.urandom(min(left, SEED_PIECE_BYTES)))
             left -= len(piece)
             if not left and tail:
-                piece[-1] &= (1 << tail) - 1        # bits beyond the end are zero in every packed file
+                piece[-1] &= (1 << tail) - 1  # bits beyond the end are zero in every packed file
             file.write(piece)
         file.flush()
         os.fsync(file.fileno())
     return path, True
 
 
-def _extract(args: argparse.Namespace, declaration: Declaration, certificate: Certificate, seed_path: Path, digest: str) -> bytes:
+def _extract(
+    args: argparse.Namespace, declaration: Declaration, certificate: Certificate, seed_path: Path, digest: str
+) -> bytes:
     """The bits; the second reading of the files must find the rounds the first one counted."""
     from extractor import pipeline
     from extractor.hashing.toeplitz import SeedFile
@@ -127,28 +178,45 @@ def _extract(args: argparse.Namespace, declaration: Declaration, certificate: Ce
 
     with open(seed_path, "rb") as seed_file, Progress("hashing", certificate.rounds, "rounds") as progress:
         seed = SeedFile(seed_file, certificate.seed_bits)
-        bits = pipeline.extract(declaration, certificate, batches_from, seed, threads=args.threads,
-                                on_progress=lambda done, _: progress.move_to(done))
+        bits = pipeline.extract(
+            declaration,
+            certificate,
+            batches_from,
+            seed,
+            threads=args.threads,
+            on_progress=lambda done, _: progress.move_to(done),
+        )
     if again.hexdigest() != digest:
-        raise InputError("the round files changed while they were being read; nothing was written", code="files-changed")
+        raise InputError(
+            "the round files changed while they were being read; nothing was written", code="files-changed"
+        )
     return bits
 
 
 def certificate_lines(certificate: Certificate) -> list[str]:
     """A certificate for reading: outcome, numbers, terms."""
     c = certificate
-    lines = rows([
-        ("outcome", c.outcome if c.reason is None else f"{c.outcome}: {c.reason}"),
-        ("certified length", f"{grouped(c.certified_length)} bits"),
-        ("available", f"{grouped(c.available_bits)} bits"),
-        ("rounds", f"{grouped(c.rounds)} of {grouped(c.declared_rounds)} declared"),
-        ("soundness error", f"{c.soundness:g}"),
-        ("method", c.method),
-        ("seed", f"{grouped(c.seed_bits)} bits"),
-    ])
+    lines = rows(
+        [
+            ("outcome", c.outcome if c.reason is None else f"{c.outcome}: {c.reason}"),
+            ("certified length", f"{grouped(c.certified_length)} bits"),
+            ("available", f"{grouped(c.available_bits)} bits"),
+            ("rounds", f"{grouped(c.rounds)} of {grouped(c.declared_rounds)} declared"),
+            ("soundness error", f"{c.soundness:g}"),
+            ("method", c.method),
+            ("seed", f"{grouped(c.seed_bits)} bits"),
+        ]
+    )
     lines += ["", "terms (bits)"] + [f"  {term.name:<28}{_bits(term.bits):>22}" for term in c.terms]
-    return [*lines, "", "The certificate is conditional on these assumptions:", *bullets(c.assumptions),
-            "", "Mind:", *bullets(c.cautions)]
+    return [
+        *lines,
+        "",
+        "The certificate is conditional on these assumptions:",
+        *bullets(c.assumptions),
+        "",
+        "Mind:",
+        *bullets(c.cautions),
+    ]
 
 
 def _bits(value: float) -> str:
@@ -158,20 +226,51 @@ def _bits(value: float) -> str:
 def verify(args: argparse.Namespace) -> int:
     from extractor.seal.verify import verify_bundle
 
+    data = read_bytes(args.bundle, LARGEST_BUNDLE_BYTES)
     sentences: list[str] = []
 
-    def say(sentence: object = "") -> None:
-        sentences.append(str(sentence))
-        if args.json:
-            note(str(sentence))
-        else:
-            print(sentence, flush=True)
+    def say(sentence: str) -> None:
+        sentences.append(sentence)
+        for line in textwrap.wrap(
+            sentence, WIDTH, subsequent_indent="  ", break_long_words=False, break_on_hyphens=False
+        ):
+            print(line, file=sys.stderr if args.json else sys.stdout, flush=True)
 
-    data = read_bytes(args.bundle, LARGEST_BUNDLE_BYTES)
-    bits = read_bytes(args.bits, 1 << 40) if args.bits else None
-    verdict = verify_bundle(data, bits=bits, bits_salt=salt_of(args.bits_salt), trusted_key=_text_or_file(args.key), say=say)
-    emit(args, {"verified": True, "checks": sentences}, [])
-    return DONE if verdict else REFUSED
+    with ExitStack() as stack:
+        rounds = [(stack.enter_context(open(path, "rb")), Path(path).name) for path in args.rounds or ()]
+        seed = stack.enter_context(open(args.seed, "rb")) if args.seed else None
+        bits = stack.enter_context(open(args.bits, "rb")) if args.bits else None
+        try:
+            verdict = verify_bundle(
+                data,
+                rounds=rounds or None,
+                seed=seed,
+                bits=bits,
+                bits_salt=salt_of(args.bits_salt),
+                trusted_key=_text_or_file(args.key),
+                say=say,
+            )
+        except ProofError as fault:
+            if args.json:
+                emit(args, {"verified": False, "code": fault.code, "reason": str(fault), "checks": sentences}, [])
+            raise
+    emit(
+        args,
+        {
+            "verified": True,
+            "run": verdict.run,
+            "outcome": verdict.outcome,
+            "certified_length": verdict.certified_length,
+            "checks": [{"name": name, "sentence": sentence} for name, sentence in verdict.checks],
+            "unchecked": list(verdict.unchecked),
+        },
+        [
+            "",
+            f"verified: run {verdict.run}, {verdict.outcome}, {grouped(verdict.certified_length)} bits",
+            *([f"{len(verdict.unchecked)} things were left unchecked, as said above"] if verdict.unchecked else []),
+        ],
+    )
+    return DONE
 
 
 def salt_of(text: str | None) -> bytes | None:

@@ -8,13 +8,28 @@ from typing import Any
 
 from extractor.errors import InputError
 from extractor.model import METHODS, Tally
-from service.commands.common import DONE, add_command, emit, grouped, json_bytes, note, read_json, real, rows, whole, write_file
+from service.commands.common import (
+    DONE,
+    add_command,
+    emit,
+    grouped,
+    json_bytes,
+    note,
+    read_json,
+    real,
+    rows,
+    whole,
+    write_file,
+)
 from service.commands.rounds import Reading, add_rig_options, reading_of
 
 
 def add(commands: Any) -> None:
     parser = add_command(
-        commands, "plan", plan, "expected certified length, or the rounds a length needs",
+        commands,
+        "plan",
+        plan,
+        "expected certified length, or the rounds a length needs",
         """Says how many bits a run may be expected to certify, from its number of rounds, the winning probability the
         rig is expected at (or an earlier tally) and the soundness error. Without --method all methods are compared;
         with --length the number of rounds that length needs is printed. Plan before the rounds exist: parameters
@@ -23,14 +38,20 @@ def add(commands: Any) -> None:
         bellassay plan --rounds 1e8 --score 0.8 --soundness 1e-10
         bellassay plan --length 1e6 --score 0.8 --soundness 1e-10 \\
             --method factor-closed
-        """)
+        """,
+    )
     parser.add_argument("--rounds", type=whole, metavar="N", help="number of rounds of the run")
-    parser.add_argument("--length", type=whole, metavar="BITS", help="wanted certified length, in bits; prints the rounds it needs")
+    parser.add_argument(
+        "--length", type=whole, metavar="BITS", help="wanted certified length, in bits; prints the rounds it needs"
+    )
     _add_choices(parser, method_required=False)
     add_rig_options(parser)
 
     parser = add_command(
-        commands, "declare", declare, "fix everything before the rounds exist, as a declaration file",
+        commands,
+        "declare",
+        declare,
+        "fix everything before the rounds exist, as a declaration file",
         """Chooses the method's parameters (score table, order or threshold, length) from the expected winning
         probability or a calibration tally and writes them as a declaration file. The calibration must be earlier
         rounds, never part of the run. With --post the declaration is recorded at the service at once, which gives it
@@ -38,35 +59,66 @@ def add(commands: Any) -> None:
         """
         bellassay declare --rig "north table" --rounds 1e8 --score 0.8 \\
             --method factor-closed --soundness 1e-10 --out run7.json --post
-        """)
+        """,
+    )
     parser.add_argument("--rig", required=True, metavar="NAME", help="name of the apparatus, 1 to 200 characters")
     parser.add_argument("--purpose", default="", metavar="TEXT", help="what the bits are for, up to 200 characters")
     parser.add_argument("--rounds", type=whole, required=True, metavar="N", help="number of rounds of the run")
-    parser.add_argument("--length", type=whole, metavar="BITS",
-                        help="output length in bits: exact (fixed rule) or the most that is taken (credit rule)")
+    parser.add_argument(
+        "--length",
+        type=whole,
+        metavar="BITS",
+        help="output length in bits: exact (fixed rule) or the most that is taken (credit rule)",
+    )
     _add_choices(parser, method_required=True)
     add_rig_options(parser)
-    parser.add_argument("--seed-source", choices=("system", "upload"), default="system",
-                        help="seed drawn from the operating system after sealing, or uploaded by you (default system)")
+    parser.add_argument(
+        "--seed-source",
+        choices=("system", "upload"),
+        default="system",
+        help="seed drawn from the operating system after sealing, or uploaded by you (default system)",
+    )
     parser.add_argument("--out", required=True, metavar="D.json", help="file to write; an existing one is not replaced")
     parser.add_argument("--post", action="store_true", help="record it at the service and print its id")
     from service.commands.remote import add_service_options
+
     add_service_options(parser)
 
 
 def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> None:
     expectation = parser.add_mutually_exclusive_group(required=True)
-    expectation.add_argument("--score", type=real, metavar="W", help="expected winning probability, between 0.75 and 0.853553")
-    expectation.add_argument("--calibration", metavar="COUNTS.json", help="tally of earlier rounds, as written by: bellassay tally --json")
-    parser.add_argument("--soundness", type=real, required=True, metavar="E", help="soundness error, in (0, 1), such as 1e-10")
+    expectation.add_argument(
+        "--score", type=real, metavar="W", help="expected winning probability, between 0.75 and 0.853553"
+    )
+    expectation.add_argument(
+        "--calibration", metavar="COUNTS.json", help="tally of earlier rounds, as written by: bellassay tally --json"
+    )
+    parser.add_argument(
+        "--soundness", type=real, required=True, metavar="E", help="soundness error, in (0, 1), such as 1e-10"
+    )
     parser.add_argument("--method", choices=METHODS, required=method_required, help="how the length is certified")
-    parser.add_argument("--order", type=real, metavar="A", help="order of the method, in (1, 2] (default: the best one found)")
-    parser.add_argument("--output-rule", choices=("fixed", "credit"), default="fixed",
-                        help="fixed: exactly the declared length or a refusal; credit: as many bits as are earned (default fixed)")
-    parser.add_argument("--disclosure", choices=("confidential", "public"), default="confidential",
-                        help="public: report and tally may become known, which is paid for in bits (default confidential)")
-    parser.add_argument("--confidence", type=real, default=0.99, metavar="P",
-                        help="probability with which an honest rig is to reach a fixed length (default 0.99)")
+    parser.add_argument(
+        "--order", type=real, metavar="A", help="order of the method, in (1, 2] (default: the best one found)"
+    )
+    parser.add_argument(
+        "--output-rule",
+        choices=("fixed", "credit"),
+        default="fixed",
+        help="fixed: exactly the declared length or a refusal; credit: as many bits as are earned (default fixed)",
+    )
+    parser.add_argument(
+        "--disclosure",
+        choices=("confidential", "public"),
+        default="confidential",
+        help="public: report and tally may become known, which is paid for in bits (default confidential)",
+    )
+    parser.add_argument(
+        "--confidence",
+        type=real,
+        default=0.99,
+        metavar="P",
+        help="probability with which an honest rig is to reach a fixed length (default 0.99)",
+    )
 
 
 def read_calibration(path: str) -> Tally:
@@ -76,7 +128,9 @@ def read_calibration(path: str) -> Tally:
     try:
         return tally_from(read_json(path))
     except InputError as fault:
-        raise InputError(fault.message, code=fault.code, file=fault.file or path, row=fault.row, field=fault.field) from None
+        raise InputError(
+            fault.message, code=fault.code, file=fault.file or path, row=fault.row, field=fault.field
+        ) from None
 
 
 def _score(args: argparse.Namespace, reading: Reading) -> float:
@@ -93,8 +147,15 @@ def plan(args: argparse.Namespace) -> int:
     if (args.rounds is None) == (args.length is None):
         raise InputError("give either --rounds (prints the length) or --length (prints the rounds)", code="bad-usage")
     reading = reading_of(args)
-    common = dict(score=_score(args, reading), settings=reading.settings, soundness=args.soundness, disclosure=args.disclosure,
-                  output_rule=args.output_rule, order=args.order, confidence=args.confidence)
+    common = dict(
+        score=_score(args, reading),
+        settings=reading.settings,
+        soundness=args.soundness,
+        disclosure=args.disclosure,
+        output_rule=args.output_rule,
+        order=args.order,
+        confidence=args.confidence,
+    )
     plans, refusals = [], []
     for method in (args.method,) if args.method else METHODS:
         try:
@@ -111,23 +172,36 @@ def plan(args: argparse.Namespace) -> int:
 
 def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]:
     plans = document["plans"]
-    lines = rows([
-        *([("wanted length", f"{grouped(args.length)} bits")] if args.length else [("rounds", grouped(args.rounds))]),
-        ("winning probability", f"{document['score']:.7f}"),
-        ("soundness error", f"{args.soundness:g}"),
-        *([("no method exceeds", f"{plans[0]['limit_rate']:.6f} bits per round")] if plans else []),
-    ])
+    lines = rows(
+        [
+            *(
+                [("wanted length", f"{grouped(args.length)} bits")]
+                if args.length
+                else [("rounds", grouped(args.rounds))]
+            ),
+            ("winning probability", f"{document['score']:.7f}"),
+            ("soundness error", f"{args.soundness:g}"),
+            *([("no method exceeds", f"{plans[0]['limit_rate']:.6f} bits per round")] if plans else []),
+        ]
+    )
     if plans:
         lines += ["", f"{'method':<15}{'rounds':>18}{'expected bits':>18}{'reached surely':>18}{'order':>11}"]
         for p in plans:
             order = f"{p['order']:.6f}" if p["order"] is not None else "-"
-            lines.append(f"{p['method']:<15}{grouped(p['rounds']):>18}{grouped(p['certified_length']):>18}"
-                         f"{grouped(p['reliable_length']):>18}{order:>11}")
+            lines.append(
+                f"{p['method']:<15}{grouped(p['rounds']):>18}{grouped(p['certified_length']):>18}"
+                f"{grouped(p['reliable_length']):>18}{order:>11}"
+            )
         lines += ["", f"reached surely: by an honest rig with probability {args.confidence:g}"]
         if args.method:
             p = plans[0]
-            lines += rows([("credit", f"{p['rate']:.6f} bits per round"), ("penalty", f"{p['penalty_bits']:.1f} bits"),
-                           ("seed needed", f"{grouped(p['seed_bits'])} bits")])
+            lines += rows(
+                [
+                    ("credit", f"{p['rate']:.6f} bits per round"),
+                    ("penalty", f"{p['penalty_bits']:.1f} bits"),
+                    ("seed needed", f"{grouped(p['seed_bits'])} bits"),
+                ]
+            )
         lines += [f"{p['method']}: {p['note']}" for p in plans if p.get("note")]
     lines += [f"{r['method']} does not apply: {r['detail']}" for r in document["not_applicable"]]
     return lines
@@ -142,16 +216,34 @@ def declare(args: argparse.Namespace) -> int:
     if out.exists():
         raise InputError("exists already; a declaration is never replaced", code="file-exists", file=str(out))
     reading = reading_of(args)
-    expectation: dict[str, Any] = ({"score": args.score} if args.calibration is None else
-                                   {"calibration": read_calibration(args.calibration)})
+    expectation: dict[str, Any] = (
+        {"score": args.score} if args.calibration is None else {"calibration": read_calibration(args.calibration)}
+    )
     declaration = pipeline.declare(
-        rig=args.rig, purpose=args.purpose, rounds=args.rounds, method=args.method, soundness=args.soundness,
-        settings=reading.settings, convention=reading.convention, no_click=reading.no_click, output_rule=args.output_rule,
-        output_bits=args.length, disclosure=args.disclosure, seed_source=args.seed_source, order=args.order,
-        confidence=args.confidence, **expectation)
+        rig=args.rig,
+        purpose=args.purpose,
+        rounds=args.rounds,
+        method=args.method,
+        soundness=args.soundness,
+        settings=reading.settings,
+        convention=reading.convention,
+        no_click=reading.no_click,
+        output_rule=args.output_rule,
+        output_bits=args.length,
+        disclosure=args.disclosure,
+        seed_source=args.seed_source,
+        order=args.order,
+        confidence=args.confidence,
+        **expectation,
+    )
     document = declaration_document(declaration)
     write_file(out, json_bytes(document), replace=False)
-    result: dict[str, Any] = {"file": str(out), "digest": canonical.digest(document), "declaration": document, "recorded": None}
+    result: dict[str, Any] = {
+        "file": str(out),
+        "digest": canonical.digest(document),
+        "declaration": document,
+        "recorded": None,
+    }
     if args.post:
         from service.commands.remote import client_of
 
@@ -159,15 +251,29 @@ def declare(args: argparse.Namespace) -> int:
         recorded = client_of(args).declare(document)
         result["recorded"] = {name: recorded.get(name) for name in ("id", "digest", "time", "ledger_index")}
     d = declaration
-    emit(args, result, rows([
-        ("written", out),
-        ("digest", result["digest"]),
-        ("method", d.method + (f", order {d.order:.6f}" if d.order is not None else "")),
-        ("rounds", grouped(d.rounds)),
-        ("expected score", f"{d.expected_score:.7f}" if d.expected_score is not None else "not given"),
-        ("soundness error", f"{d.soundness:g}"),
-        ("output", f"{'exactly' if d.output_rule == 'fixed' else 'at most'} {grouped(d.output_bits)} bits, rule {d.output_rule}"),
-        *([("recorded as", result["recorded"]["id"]), ("at", result["recorded"]["time"])] if args.post else
-          [("recorded", "not yet: submit records it, or use --post; do it before the first round is taken")]),
-    ]))
+    emit(
+        args,
+        result,
+        rows(
+            [
+                ("written", out),
+                ("digest", result["digest"]),
+                ("method", d.method + (f", order {d.order:.6f}" if d.order is not None else "")),
+                ("rounds", grouped(d.rounds)),
+                ("expected score", f"{d.expected_score:.7f}" if d.expected_score is not None else "not given"),
+                ("soundness error", f"{d.soundness:g}"),
+                (
+                    "output",
+                    f"{'exactly' if d.output_rule == 'fixed' else 'at most'} {grouped(d.output_bits)} bits",
+                ),
+                *(
+                    [("recorded as", result["recorded"]["id"]), ("at", result["recorded"]["time"])]
+                    if args.post
+                    else [
+                        ("recorded", "not yet: submit records it, or use --post; do it before the first round is taken")
+                    ]
+                ),
+            ]
+        ),
+    )
     return DONE

@@ -15,24 +15,47 @@ from service.commands.common import four_probabilities, read_declaration, real, 
 
 def add_reading_options(parser: argparse.ArgumentParser) -> None:
     """--declaration, or the single values a declaration would fix."""
-    parser.add_argument("--declaration", metavar="D.json", help="read settings, convention and no-click values from this declaration")
+    parser.add_argument(
+        "--declaration", metavar="D.json", help="read settings, convention and no-click values from this declaration"
+    )
     add_rig_options(parser)
 
 
 def add_rig_options(parser: argparse.ArgumentParser) -> None:
     """The single values of settings, convention and no-clicks; every default is None = not given."""
-    parser.add_argument("--minus", type=setting_pair, metavar="XY",
-                        help="setting pair with the minus sign in S: 00, 01, 10 or 11 (default 11)")
+    parser.add_argument(
+        "--minus",
+        type=setting_pair,
+        metavar="XY",
+        help="setting pair with the minus sign in S: 00, 01, 10 or 11 (default 11)",
+    )
     parser.add_argument("--flip", action="store_true", default=None, help="read b inverted, which turns the sign of S")
-    parser.add_argument("--no-click-a", type=int, choices=(0, 1), metavar="BIT",
-                        help="outcome a no-click (2) on side a counts as: 0 or 1 (default: a no-click is an error)")
+    parser.add_argument(
+        "--no-click-a",
+        type=int,
+        choices=(0, 1),
+        metavar="BIT",
+        help="outcome a no-click (2) on side a counts as: 0 or 1 (default: a no-click is an error)",
+    )
     parser.add_argument("--no-click-b", type=int, choices=(0, 1), metavar="BIT", help="the same for side b")
-    parser.add_argument("--test-probability", type=real, metavar="G", help="probability of a test round, in (0, 1] (default 1)")
-    parser.add_argument("--generation", type=setting_pair, metavar="XY", help="settings of generation rounds (default 00)")
-    parser.add_argument("--distribution", type=four_probabilities, metavar="P,P,P,P",
-                        help="probabilities of the settings 00, 01, 10, 11 of a test round (default 0.25 each)")
-    parser.add_argument("--bias", type=real, metavar="TAU",
-                        help="largest deviation of a setting bit's probability, 0 to 0.25 (default 0)")
+    parser.add_argument(
+        "--test-probability", type=real, metavar="G", help="probability of a test round, in (0, 1] (default 1)"
+    )
+    parser.add_argument(
+        "--generation", type=setting_pair, metavar="XY", help="settings of generation rounds (default 00)"
+    )
+    parser.add_argument(
+        "--distribution",
+        type=four_probabilities,
+        metavar="P,P,P,P",
+        help="probabilities of the settings 00, 01, 10, 11 of a test round (default 0.25 each)",
+    )
+    parser.add_argument(
+        "--bias",
+        type=real,
+        metavar="TAU",
+        help="largest deviation of a setting bit's probability, 0 to 0.25 (default 0)",
+    )
 
 
 @dataclass(frozen=True)
@@ -62,8 +85,12 @@ def reading_of(args: argparse.Namespace) -> Reading:
     def value(name: str, default: object) -> object:
         return default if getattr(args, name) is None else getattr(args, name)
 
-    settings = Settings(value("test_probability", 1.0), value("distribution", (0.25,) * 4),  # type: ignore[arg-type]
-                        value("generation", (0, 0)), value("bias", 0.0))  # type: ignore[arg-type]
+    settings = Settings(
+        value("test_probability", 1.0),
+        value("distribution", (0.25,) * 4),  # type: ignore[arg-type]
+        value("generation", (0, 0)),
+        value("bias", 0.0),
+    )  # type: ignore[arg-type]
     return Reading(settings, Convention(args.minus or (1, 1), bool(args.flip)), (args.no_click_a, args.no_click_b))
 
 

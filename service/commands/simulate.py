@@ -12,7 +12,18 @@ from typing import Any
 from extractor.errors import InputError
 from extractor.model import PLANES, Convention, RoundBatch, Settings
 from service.commands.common import (
-    DONE, Progress, add_command, duration, emit, grouped, json_bytes, real, rows, setting_pair, whole, write_file,
+    DONE,
+    Progress,
+    add_command,
+    duration,
+    emit,
+    grouped,
+    json_bytes,
+    real,
+    rows,
+    setting_pair,
+    whole,
+    write_file,
 )
 
 RIG_FORMAT = "bellassay simulated rig 1"
@@ -29,7 +40,10 @@ MEMORY_POLICIES = ("bet-on-rarest", "switch-after-loss", "stop-when-ahead")
 
 def add(commands: Any) -> None:
     parser = add_command(
-        commands, "simulate", simulate, "write round files of an invented rig",
+        commands,
+        "simulate",
+        simulate,
+        "write round files of an invented rig",
         """Draws the rounds of an invented rig and writes them as round files, with rig.json saying how they were made.
         The rig is an honest quantum one with the state and angles that give the largest score, unless --local (boxes
         without entanglement), --memory (such boxes that learn from earlier rounds) or a --fault is given. The same
@@ -38,30 +52,82 @@ def add(commands: Any) -> None:
         bellassay simulate --rounds 1e7 --visibility 0.98 --seed 7 --out lab/
         bellassay simulate --rounds 1e6 --local --fault setting-bias=0.02 \\
             --seed 7 --out cheat/
-        """)
+        """,
+    )
     parser.add_argument("--rounds", type=whole, required=True, metavar="N", help="number of rounds")
-    parser.add_argument("--visibility", type=real, default=1.0, metavar="V", help="1 minus the share of white noise, 0 to 1 (default 1)")
-    parser.add_argument("--efficiency", type=_one_or_two, default=(1.0, 1.0), metavar="H[,H]",
-                        help="detector efficiency, 0 to 1, for both sides or one each (default 1)")
-    parser.add_argument("--pair-probability", type=real, default=1.0, metavar="M", help="chance that a round holds a pair, 0 to 1 (default 1)")
-    parser.add_argument("--dark-counts", type=real, default=0.0, metavar="D",
-                        help="chance that a side which sees nothing clicks all the same, 0 to 1 (default 0)")
-    parser.add_argument("--state-angle", type=real, metavar="RAD",
-                        help="state cos|00> + sin|11> in radians; 0.785398 is maximally entangled (default: the best)")
-    parser.add_argument("--test-probability", type=real, default=1.0, metavar="G", help="probability of a test round, in (0, 1] (default 1)")
-    parser.add_argument("--minus", type=setting_pair, default=(1, 1), metavar="XY",
-                        help="setting pair with the minus sign in S: 00, 01, 10 or 11 (default 11)")
+    parser.add_argument(
+        "--visibility", type=real, default=1.0, metavar="V", help="1 minus the share of white noise, 0 to 1 (default 1)"
+    )
+    parser.add_argument(
+        "--efficiency",
+        type=_one_or_two,
+        default=(1.0, 1.0),
+        metavar="H[,H]",
+        help="detector efficiency, 0 to 1, for both sides or one each (default 1)",
+    )
+    parser.add_argument(
+        "--pair-probability",
+        type=real,
+        default=1.0,
+        metavar="M",
+        help="chance that a round holds a pair, 0 to 1 (default 1)",
+    )
+    parser.add_argument(
+        "--dark-counts",
+        type=real,
+        default=0.0,
+        metavar="D",
+        help="chance that a side which sees nothing clicks all the same, 0 to 1 (default 0)",
+    )
+    parser.add_argument(
+        "--state-angle",
+        type=real,
+        metavar="RAD",
+        help="state cos|00> + sin|11> in radians; 0.785398 is maximally entangled (default: the best)",
+    )
+    parser.add_argument(
+        "--test-probability",
+        type=real,
+        default=1.0,
+        metavar="G",
+        help="probability of a test round, in (0, 1] (default 1)",
+    )
+    parser.add_argument(
+        "--minus",
+        type=setting_pair,
+        default=(1, 1),
+        metavar="XY",
+        help="setting pair with the minus sign in S: 00, 01, 10 or 11 (default 11)",
+    )
     parser.add_argument("--flip", action="store_true", help="b inverted, which turns the sign of S")
     kind = parser.add_mutually_exclusive_group()
-    kind.add_argument("--local", action="store_true", help="boxes without entanglement, at the local bound (score 0.75)")
-    kind.add_argument("--memory", choices=MEMORY_POLICIES, metavar="POLICY",
-                      help=f"such boxes with memory: {', '.join(MEMORY_POLICIES)}")
-    parser.add_argument("--fault", action="append", default=[], type=_fault, metavar="NAME=VALUE",
-                        help="may be repeated. " + "; ".join(f"{name}: {text}" for name, text in FAULTS.items()))
-    parser.add_argument("--seed", type=whole, required=True, metavar="K", help="whole number >= 0 from which everything is drawn")
+    kind.add_argument(
+        "--local", action="store_true", help="boxes without entanglement, at the local bound (score 0.75)"
+    )
+    kind.add_argument(
+        "--memory",
+        choices=MEMORY_POLICIES,
+        metavar="POLICY",
+        help=f"such boxes with memory: {', '.join(MEMORY_POLICIES)}",
+    )
+    parser.add_argument(
+        "--fault",
+        action="append",
+        default=[],
+        type=_fault,
+        metavar="NAME=VALUE",
+        help="may be repeated. " + "; ".join(f"{name}: {text}" for name, text in FAULTS.items()),
+    )
+    parser.add_argument(
+        "--seed", type=whole, required=True, metavar="K", help="whole number >= 0 from which everything is drawn"
+    )
     parser.add_argument("--segments", type=whole, default=1, metavar="S", help="number of files (default 1)")
-    parser.add_argument("--format", choices=("npz", "npy", "csv"), default="npz",
-                        help="npz: packed planes, 5/8 byte per round; npy: 5 bytes; csv: 10 bytes (default npz)")
+    parser.add_argument(
+        "--format",
+        choices=("npz", "npy", "csv"),
+        default="npz",
+        help="npz: packed planes, 5/8 byte per round; npy: 5 bytes; csv: 10 bytes (default npz)",
+    )
     parser.add_argument("--out", required=True, metavar="DIR", help="folder for the files; made if missing")
 
 
@@ -95,15 +161,31 @@ def build_rig(args: argparse.Namespace) -> Any:
         if args.memory:
             return rigs.MemoryLocalRig(args.memory, settings, convention, setting_bias=bias)
         best = losing_at(convention)
-        return rigs.LocalRig(tuple(float(strategy in best) for strategy in range(STRATEGIES)), settings, convention,
-                             bias, faults.get("lost-losses", 0.0))
-    rig = rigs.optimal_rig(args.efficiency, args.pair_probability, args.visibility, settings=settings,
-                           convention=convention, dark_counts=(args.dark_counts,) * 2)
+        return rigs.LocalRig(
+            tuple(float(strategy in best) for strategy in range(STRATEGIES)),
+            settings,
+            convention,
+            bias,
+            faults.get("lost-losses", 0.0),
+        )
+    rig = rigs.optimal_rig(
+        args.efficiency,
+        args.pair_probability,
+        args.visibility,
+        settings=settings,
+        convention=convention,
+        dark_counts=(args.dark_counts,) * 2,
+    )
     if args.state_angle is not None:
         rig = replace(rig, state_angle=args.state_angle, angles="optimal")
-    return replace(rig, setting_bias=bias, stuck=(_stuck(faults, "stuck-a"), _stuck(faults, "stuck-b")),
-                   dropped_no_clicks=faults.get("lost-no-clicks", 0.0), dropped_losses=faults.get("lost-losses", 0.0),
-                   visibility_drift=faults.get("drift", 0.0))
+    return replace(
+        rig,
+        setting_bias=bias,
+        stuck=(_stuck(faults, "stuck-a"), _stuck(faults, "stuck-b")),
+        dropped_no_clicks=faults.get("lost-no-clicks", 0.0),
+        dropped_losses=faults.get("lost-losses", 0.0),
+        visibility_drift=faults.get("drift", 0.0),
+    )
 
 
 def _stuck(faults: dict[str, float], name: str) -> int | None:
@@ -120,8 +202,11 @@ def simulate(args: argparse.Namespace) -> int:
     if args.rounds < 1:
         raise InputError("must be at least 1", code="out-of-range", field="--rounds")
     if not 1 <= args.segments <= 9999 or args.segments > max(1, args.rounds // 8):
-        raise InputError(f"{args.rounds} rounds can be split into 1 to {max(1, min(9999, args.rounds // 8))} files",
-                         code="out-of-range", field="--segments")
+        raise InputError(
+            f"{args.rounds} rounds can be split into 1 to {max(1, min(9999, args.rounds // 8))} files",
+            code="out-of-range",
+            field="--segments",
+        )
     rig = build_rig(args)
     write: Callable[..., int] = getattr(writers, f"write_{args.format}")
     out = Path(args.out)
@@ -129,7 +214,9 @@ def simulate(args: argparse.Namespace) -> int:
     with_t = args.test_probability < 1.0
     names = [f"rounds-{k:04d}.{args.format}" for k in range(1, args.segments + 1)]
     if present := [name for name in names if (out / name).exists()]:
-        raise InputError("exists already; choose another folder or remove it", code="file-exists", file=str(out / present[0]))
+        raise InputError(
+            "exists already; choose another folder or remove it", code="file-exists", file=str(out / present[0])
+        )
     files, started = [], time.monotonic()
     with Progress("simulating", args.rounds, "rounds") as progress:
         batches = _counted(rigs.simulate(rig, args.rounds, args.seed), progress.advance)
@@ -152,13 +239,19 @@ def simulate(args: argparse.Namespace) -> int:
     }
     write_file(out / "rig.json", json_bytes(document))
     rate = args.rounds / max(seconds, 1e-9)
-    emit(args, document | {"out": str(out), "seconds": seconds, "rounds_per_second": rate}, rows([
-        ("rounds", f"{grouped(args.rounds)} in {len(files)} file{'s' if len(files) > 1 else ''}"),
-        ("files", out / files[0]["file"] if len(files) == 1 else f"{out / names[0]} to {names[-1]}"),
-        ("how", out / "rig.json"),
-        *([] if memory else [("score of the rig", f"{rig.winning_probability:.7f} (S = {rig.chsh:.6f})")]),
-        ("took", f"{duration(seconds)}, {rate:.3g} rounds/s"),
-    ]))
+    emit(
+        args,
+        document | {"out": str(out), "seconds": seconds, "rounds_per_second": rate},
+        rows(
+            [
+                ("rounds", f"{grouped(args.rounds)} in {len(files)} file{'s' if len(files) > 1 else ''}"),
+                ("files", out / files[0]["file"] if len(files) == 1 else f"{out / names[0]} to {names[-1]}"),
+                ("how", out / "rig.json"),
+                *([] if memory else [("score of the rig", f"{rig.winning_probability:.7f} (S = {rig.chsh:.6f})")]),
+                ("took", f"{duration(seconds)}, {rate:.3g} rounds/s"),
+            ]
+        ),
+    )
     return DONE
 
 
@@ -183,8 +276,8 @@ def split(batches: Iterator[RoundBatch], rounds: int, segments: int) -> Iterator
             take = min(batch.rounds, end - position)
             rest = None
             if take < batch.rounds:
-                rest = RoundBatch(batch.rounds - take, {name: batch.planes[name][take // 8:] for name in PLANES})
-                batch = RoundBatch(take, {name: batch.planes[name][:take // 8] for name in PLANES})
+                rest = RoundBatch(batch.rounds - take, {name: batch.planes[name][take // 8 :] for name in PLANES})
+                batch = RoundBatch(take, {name: batch.planes[name][: take // 8] for name in PLANES})
             position += take
             yield batch
 

@@ -15,7 +15,10 @@ if TYPE_CHECKING:
 
 def add(commands: Any) -> None:
     parser = add_command(
-        commands, "tally", tally, "count the rounds of files and score them",
+        commands,
+        "tally",
+        tally,
+        "count the rounds of files and score them",
         """Reads round files (NPZ, NPY or CSV), checks every value, counts all cells (t, x, y, a, b) and prints the
         winning probability, the CHSH value, a p-value against local models with memory, and diagnostics. With --json
         the output is also what --calibration of plan and declare takes. Several files are read as one run, in the
@@ -23,7 +26,8 @@ def add(commands: Any) -> None:
         """
         bellassay tally calibration.npz --no-click-a 0 --no-click-b 0
         bellassay tally calibration.npz --json > calibration.json
-        """)
+        """,
+    )
     parser.add_argument("files", nargs="+", metavar="FILE", help="round files, in the order they were taken")
     parser.add_argument("--calibration", metavar="COUNTS.json", help="compare with this earlier tally")
     add_reading_options(parser)
@@ -76,7 +80,11 @@ def _lines(total: Tally, result: Score, document: dict[str, Any]) -> list[str]:
         lines.append(("p-value, decisive", f"{_small(result.decisive.log10_p_value)}, from the decisive rounds alone"))
     text = rows([*lines, ("digest of rounds", document["records_digest"])])
     counts = total.test_counts()
-    text += ["", "test rounds by settings (rows) and outcomes a b (columns)", f"{'':4}{'00':>16}{'01':>16}{'10':>16}{'11':>16}"]
+    text += [
+        "",
+        "test rounds by settings (rows) and outcomes a b (columns)",
+        f"{'':4}{'00':>16}{'01':>16}{'10':>16}{'11':>16}",
+    ]
     for x, y in SETTING_PAIRS:
         text.append(f"{x}{y}  " + "".join(f"{grouped(int(n)):>16}" for n in counts[x, y].reshape(-1)))
     flagged = [item for item in document["diagnostics"] if item["flag"]]
@@ -87,4 +95,4 @@ def _lines(total: Tally, result: Score, document: dict[str, Any]) -> list[str]:
 
 def _small(log10: float) -> str:
     """A p-value by its decimal logarithm, which may be far below the smallest double."""
-    return f"{10 ** log10:.3g}" if log10 > -300 else f"10^{log10:.0f}"
+    return f"{10**log10:.3g}" if log10 > -300 else f"10^{log10:.0f}"

@@ -11,7 +11,20 @@ import pytest
 from service.cli import build_parser
 
 ROOT = Path(__file__).resolve().parents[2]
-COMMANDS = ("serve", "work", "simulate", "tally", "plan", "declare", "certify", "submit", "watch", "collect", "verify", "token")
+COMMANDS = (
+    "serve",
+    "work",
+    "simulate",
+    "tally",
+    "plan",
+    "declare",
+    "certify",
+    "submit",
+    "watch",
+    "collect",
+    "verify",
+    "token",
+)
 WITHOUT_RESULT = ("serve", "work")
 
 
@@ -20,7 +33,11 @@ def leaves(parser: argparse.ArgumentParser, name: str = "") -> dict[str, argpars
     below = [action for action in parser._actions if isinstance(action, argparse._SubParsersAction)]
     if not below:
         return {name: parser}
-    return {full: leaf for word, child in below[0].choices.items() for full, leaf in leaves(child, f"{name} {word}".strip()).items()}
+    return {
+        full: leaf
+        for word, child in below[0].choices.items()
+        for full, leaf in leaves(child, f"{name} {word}".strip()).items()
+    }
 
 
 LEAVES = leaves(build_parser())
@@ -33,7 +50,7 @@ def test_the_commands_are_those_of_the_design() -> None:
 
 @pytest.mark.parametrize("name", LEAVES)
 def test_every_command_teaches(name: str) -> None:
-    """The help of a command has a paragraph, an example that calls it, and a text for every option; no line is overlong."""
+    """The help has a paragraph, an example that calls the command, a text for every option, and no overlong line."""
     parser = LEAVES[name]
     text = parser.format_help()
     assert parser.description and len(parser.description) > 60

@@ -32,8 +32,19 @@ def with_commands(folder: Path, **scripts: str) -> subprocess.CompletedProcess:
         (folder / name).write_text(f"#!/bin/sh\n{text}\n")
         (folder / name).chmod(0o755)
     return subprocess.run(
-        ["bash", "-euo", "pipefail", "-c", '. "$0"; make_environment "$1"; echo "$python"', ROOT / "deploy/environment.sh", folder / "project"],
-        env={"PATH": str(folder)}, capture_output=True, text=True)
+        [
+            "bash",
+            "-euo",
+            "pipefail",
+            "-c",
+            '. "$0"; make_environment "$1"; echo "$python"',
+            ROOT / "deploy/environment.sh",
+            folder / "project",
+        ],
+        env={"PATH": str(folder)},
+        capture_output=True,
+        text=True,
+    )
 
 
 def test_a_missing_or_old_python_is_told_with_the_command_that_helps(tmp_path: Path) -> None:
@@ -66,12 +77,25 @@ def test_an_environment_that_works_is_kept(tmp_path: Path) -> None:
     inside.mkdir(parents=True)
     (inside / "python").write_text("#!/bin/sh\nexit 0\n")
     (inside / "python").chmod(0o755)
-    done = subprocess.run(["bash", "-euo", "pipefail", "-c", '. "$0"; make_environment "$1"; echo "$python"',
-                           ROOT / "deploy/environment.sh", here / "project"], capture_output=True, text=True)
+    done = subprocess.run(
+        [
+            "bash",
+            "-euo",
+            "pipefail",
+            "-c",
+            '. "$0"; make_environment "$1"; echo "$python"',
+            ROOT / "deploy/environment.sh",
+            here / "project",
+        ],
+        capture_output=True,
+        text=True,
+    )
     assert done.returncode == 0 and done.stdout.strip() == str(inside / "python") and "making" not in done.stderr
 
 
 def test_the_demo_explains_itself() -> None:
     """The demo's options are listed by --help."""
     done = subprocess.run([sys.executable, ROOT / "deploy/demo.py", "--help"], capture_output=True, text=True)
-    assert done.returncode == 0 and all(option in done.stdout for option in ("--rounds", "--segments", "--data", "--keep"))
+    assert done.returncode == 0 and all(
+        option in done.stdout for option in ("--rounds", "--segments", "--data", "--keep")
+    )

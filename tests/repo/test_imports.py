@@ -15,8 +15,18 @@ COMMON = ("model", "errors", "documents")
 SEES_SEVERAL = ("extractor/pipeline.py", "extractor/seal/verify.py")
 OUTSIDE_EVERYWHERE = {"numpy", "scipy"}
 OUTSIDE_IN_SEAL = {"cryptography", "rfc8785"}
-FORBIDDEN_IN_EXTRACTOR = {     # no clock, no network, no database, no environment
-    "time", "datetime", "socket", "ssl", "http", "urllib", "asyncio", "sqlite3", "secrets", "subprocess", "random",
+FORBIDDEN_IN_EXTRACTOR = {  # no clock, no network, no database, no environment
+    "time",
+    "datetime",
+    "socket",
+    "ssl",
+    "http",
+    "urllib",
+    "asyncio",
+    "sqlite3",
+    "secrets",
+    "subprocess",
+    "random",
 }
 
 
@@ -31,7 +41,7 @@ def imported(path: Path) -> Iterator[tuple[str, int]]:
         if isinstance(node, ast.Import):
             yield from ((name.name, node.lineno) for name in node.names)
         elif isinstance(node, ast.ImportFrom):
-            base = [] if node.level == 0 else list(package[:len(package) - node.level + 1])
+            base = [] if node.level == 0 else list(package[: len(package) - node.level + 1])
             base += node.module.split(".") if node.module else []
             yield from ((".".join([*base, name.name]), node.lineno) for name in node.names)
 
@@ -44,8 +54,12 @@ def stage_of(path: Path) -> str | None:
 
 def trouble(package: str, wrong) -> list[str]:
     """Places in `package` where wrong(path, dotted module name) is true."""
-    return [f"{path.relative_to(ROOT)}:{line} imports {module}"
-            for path in sources(package) for module, line in imported(path) if wrong(path, module)]
+    return [
+        f"{path.relative_to(ROOT)}:{line} imports {module}"
+        for path in sources(package)
+        for module, line in imported(path)
+        if wrong(path, module)
+    ]
 
 
 def test_extractor_never_imports_the_service() -> None:
@@ -59,7 +73,8 @@ def test_nothing_in_the_product_imports_the_tests() -> None:
 
 
 def test_extractor_uses_only_the_allowed_outside_packages() -> None:
-    """Outside the standard library the extractor needs numpy and scipy, and in seal/ the signature and JSON packages."""
+    """Besides the standard library: numpy and scipy, and in seal/ the signature and JSON packages."""
+
     def wrong(path: Path, module: str) -> bool:
         root = module.split(".")[0]
         allowed = OUTSIDE_EVERYWHERE | (OUTSIDE_IN_SEAL if stage_of(path) == "seal" else set())
@@ -76,14 +91,18 @@ def test_extractor_has_no_clock_network_database_or_chance() -> None:
 def test_extractor_does_not_read_the_environment() -> None:
     """No result may depend on an environment variable."""
     assert not trouble("extractor", lambda path, module: module in ("os.environ", "os.getenv"))
-    reads = [f"{path.relative_to(ROOT)}:{node.lineno}" for path in sources("extractor")
-             for node in ast.walk(ast.parse(path.read_text(encoding="utf-8")))
-             if isinstance(node, ast.Attribute) and node.attr in ("environ", "getenv", "urandom")]
+    reads = [
+        f"{path.relative_to(ROOT)}:{node.lineno}"
+        for path in sources("extractor")
+        for node in ast.walk(ast.parse(path.read_text(encoding="utf-8")))
+        if isinstance(node, ast.Attribute) and node.attr in ("environ", "getenv", "urandom")
+    ]
     assert not reads
 
 
 def test_stages_do_not_import_each_other() -> None:
     """A stage sees model, errors, documents and its own folder; only pipeline and seal/verify see several stages."""
+
     def wrong(path: Path, module: str) -> bool:
         parts = module.split(".")
         if parts[0] != "extractor" or stage_of(path) is None or str(path.relative_to(ROOT)) in SEES_SEVERAL:
@@ -95,30 +114,40 @@ def test_stages_do_not_import_each_other() -> None:
 
 def test_common_values_know_no_stage() -> None:
     """model, errors and documents stand below every stage."""
+
     def wrong(path: Path, module: str) -> bool:
         parts = module.split(".")
-        return (path.parent == ROOT / "extractor" and path.stem in COMMON
-                and parts[0] == "extractor" and (len(parts) < 2 or parts[1] not in COMMON))
+        return (
+            path.parent == ROOT / "extractor"
+            and path.stem in COMMON
+            and parts[0] == "extractor"
+            and (len(parts) < 2 or parts[1] not in COMMON)
+        )
 
     assert not trouble("extractor", wrong)
 
 
 def test_the_client_half_of_the_service_stands_alone() -> None:
     """client.py and transport.py speak HTTP to the service and must import neither its store nor its jobs."""
+
     def wrong(path: Path, module: str) -> bool:
         return path.name in ("client.py", "transport.py") and not (
-            module.split(".")[0] != "service" or module.startswith("service.transport."))
+            module.split(".")[0] != "service" or module.startswith("service.transport.")
+        )
 
     assert not trouble("service", wrong)
 
 
-@pytest.mark.parametrize("text, expected", [
-    ("import a.b", {"a.b"}),
-    ("from extractor.bell import score", {"extractor.bell.score"}),
-    ("from . import planes", {"extractor.records.planes"}),
-    ("from ..bell.score import Score", {"extractor.bell.score.Score"}),
-    ("def f():\n    from service import app", {"service.app"}),
-])
+@pytest.mark.parametrize(
+    "text, expected",
+    [
+        ("import a.b", {"a.b"}),
+        ("from extractor.bell import score", {"extractor.bell.score"}),
+        ("from . import planes", {"extractor.records.planes"}),
+        ("from ..bell.score import Score", {"extractor.bell.score.Score"}),
+        ("def f():\n    from service import app", {"service.app"}),
+    ],
+)
 def test_imports_are_found_in_every_spelling(text: str, expected: set[str], tmp_path: Path, monkeypatch) -> None:
     """Absolute, relative and late imports must all be seen, or the rules above check nothing."""
     path = tmp_path / "extractor" / "records" / "example.py"

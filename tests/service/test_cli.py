@@ -23,19 +23,50 @@ ROUNDS = 200_000
 def lab(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """A folder with the rounds of a good rig in three files, of a local one, a calibration and a declaration."""
     folder = tmp_path_factory.mktemp("lab")
-    quiet(folder, "simulate", "--rounds", ROUNDS, "--visibility", 0.98, "--seed", 7, "--segments", 3, "--out", folder / "good")
+    quiet(
+        folder,
+        "simulate",
+        "--rounds",
+        ROUNDS,
+        "--visibility",
+        0.98,
+        "--seed",
+        7,
+        "--segments",
+        3,
+        "--out",
+        folder / "good",
+    )
     quiet(folder, "simulate", "--rounds", ROUNDS, "--local", "--seed", 8, "--out", folder / "local")
     quiet(folder, "simulate", "--rounds", ROUNDS, "--visibility", 0.98, "--seed", 9, "--out", folder / "earlier")
     counts = quiet(folder, "tally", folder / "earlier/rounds-0001.npz")
     (folder / "calibration.json").write_text(json.dumps(counts))
-    quiet(folder, "declare", "--rig", "north table", "--rounds", ROUNDS, "--calibration", folder / "calibration.json",
-          "--method", "factor-closed", "--soundness", 1e-6, "--length", 20_000, "--out", folder / "run.json")
+    quiet(
+        folder,
+        "declare",
+        "--rig",
+        "north table",
+        "--rounds",
+        ROUNDS,
+        "--calibration",
+        folder / "calibration.json",
+        "--method",
+        "factor-closed",
+        "--soundness",
+        1e-6,
+        "--length",
+        20_000,
+        "--out",
+        folder / "run.json",
+    )
     return folder
 
 
 def quiet(folder: Path, *words: object) -> dict:
     """Run a command in a process of its own, expecting success; its JSON result."""
-    done = subprocess.run([sys.executable, "-m", "service.cli", *map(str, words), "--json"], capture_output=True, text=True)
+    done = subprocess.run(
+        [sys.executable, "-m", "service.cli", *map(str, words), "--json"], capture_output=True, text=True
+    )
     assert done.returncode == 0, done.stderr
     return json.loads(done.stdout)
 
@@ -44,7 +75,7 @@ def run(capsys: pytest.CaptureFixture, *words: object) -> tuple[int, str, str]:
     """Run a command in this process: exit code, standard output, standard error."""
     try:
         code = main([str(word) for word in words])
-    except SystemExit as end:               # argparse leaves this way
+    except SystemExit as end:  # argparse leaves this way
         code = end.code
     captured = capsys.readouterr()
     return code, captured.out, captured.err
@@ -56,10 +87,23 @@ def good_files(lab: Path) -> list[Path]:
 
 # ---- simulate
 
+
 def test_the_same_seed_gives_the_same_rounds_however_they_are_split(lab: Path, tmp_path: Path, capsys) -> None:
     """Segments and format change the files, never the rounds."""
     for k, options in enumerate([["--segments", 7, "--format", "npy"], ["--format", "csv"]]):
-        code, _, _ = run(capsys, "simulate", "--rounds", ROUNDS, "--visibility", 0.98, "--seed", 7, "--out", tmp_path / str(k), *options)
+        code, _, _ = run(
+            capsys,
+            "simulate",
+            "--rounds",
+            ROUNDS,
+            "--visibility",
+            0.98,
+            "--seed",
+            7,
+            "--out",
+            tmp_path / str(k),
+            *options,
+        )
         assert code == 0
     expected = read_run(batches_of(opened(good_files(lab)), RoundRules()))
     for k in range(2):
@@ -70,7 +114,9 @@ def test_the_same_seed_gives_the_same_rounds_however_they_are_split(lab: Path, t
 @pytest.mark.parametrize("segments, rounds", [(1, 1), (1, 9), (2, 17), (5, 100), (3, 3_000_001)])
 def test_segments_hold_all_rounds_in_nearly_equal_parts(segments: int, rounds: int, tmp_path: Path, capsys) -> None:
     """No round is lost at a seam, whatever the sizes."""
-    code, out, _ = run(capsys, "simulate", "--rounds", rounds, "--segments", segments, "--seed", 1, "--out", tmp_path, "--json")
+    code, out, _ = run(
+        capsys, "simulate", "--rounds", rounds, "--segments", segments, "--seed", 1, "--out", tmp_path, "--json"
+    )
     sizes = [item["rounds"] for item in json.loads(out)["files"]]
     assert code == 0 and sum(sizes) == rounds and len(sizes) == segments and max(sizes) - min(sizes) < 16
 
@@ -82,11 +128,16 @@ def test_simulate_says_how_the_rounds_were_made(lab: Path) -> None:
     assert document["winning_probability"] == pytest.approx(0.5 + 0.98 * 2**0.5 / 4, abs=1e-9)
 
 
-@pytest.mark.parametrize("options, kind", [
-    (["--local"], "local"), (["--memory", "stop-when-ahead"], "memory"), (["--fault", "stuck-a=1"], "quantum"),
-    (["--local", "--fault", "setting-bias=0.02", "--fault", "lost-losses=0.1"], "local"),
-    (["--fault", "lost-no-clicks=0.5", "--efficiency", "0.8,0.7", "--fault", "drift=-0.1"], "quantum"),
-])
+@pytest.mark.parametrize(
+    "options, kind",
+    [
+        (["--local"], "local"),
+        (["--memory", "stop-when-ahead"], "memory"),
+        (["--fault", "stuck-a=1"], "quantum"),
+        (["--local", "--fault", "setting-bias=0.02", "--fault", "lost-losses=0.1"], "local"),
+        (["--fault", "lost-no-clicks=0.5", "--efficiency", "0.8,0.7", "--fault", "drift=-0.1"], "quantum"),
+    ],
+)
 def test_every_kind_of_rig_can_be_simulated(options: list[str], kind: str, tmp_path: Path, capsys) -> None:
     """Local boxes, boxes with memory and every fault give readable rounds."""
     code, out, _ = run(capsys, "simulate", "--rounds", 5000, "--seed", 3, "--out", tmp_path, "--json", *options)
@@ -94,12 +145,21 @@ def test_every_kind_of_rig_can_be_simulated(options: list[str], kind: str, tmp_p
     assert read_run(batches_of(opened([tmp_path / "rounds-0001.npz"]), RoundRules()))[0].rounds == 5000
 
 
-@pytest.mark.parametrize("options, word", [
-    (["--rounds", "1.5"], "whole number"), (["--rounds", "0"], "at least 1"), (["--rounds", "9", "--segments", "4"], "--segments"),
-    (["--visibility", "1.2"], "visibility"), (["--efficiency", "0.9,0.9,0.9"], "two with a comma"), (["--fault", "gremlins=1"], "gremlins"),
-    (["--fault", "stuck-a=0.5"], "stuck"), (["--local", "--fault", "drift=1"], "quantum rig only"), (["--seed", "-1"], "negative"),
-    (["--visibility", "nan"], "not a number"),
-])
+@pytest.mark.parametrize(
+    "options, word",
+    [
+        (["--rounds", "1.5"], "whole number"),
+        (["--rounds", "0"], "at least 1"),
+        (["--rounds", "9", "--segments", "4"], "--segments"),
+        (["--visibility", "1.2"], "visibility"),
+        (["--efficiency", "0.9,0.9,0.9"], "two with a comma"),
+        (["--fault", "gremlins=1"], "gremlins"),
+        (["--fault", "stuck-a=0.5"], "stuck"),
+        (["--local", "--fault", "drift=1"], "quantum rig only"),
+        (["--seed", "-1"], "negative"),
+        (["--visibility", "nan"], "not a number"),
+    ],
+)
 def test_nonsense_options_are_refused_in_words(options: list[str], word: str, tmp_path: Path, capsys) -> None:
     """Exit code 2 and a sentence that names what is wrong; nothing is written."""
     base = {"--rounds": "1000", "--seed": "1", "--out": str(tmp_path / "x")}
@@ -116,6 +176,7 @@ def test_simulate_does_not_overwrite_rounds(lab: Path, capsys) -> None:
 
 
 # ---- tally
+
 
 def test_tally_counts_files_as_one_run(lab: Path, capsys) -> None:
     """The JSON result holds the cells, the score with its error, p-value and diagnostics."""
@@ -151,7 +212,9 @@ def test_a_no_click_needs_a_declared_value(tmp_path: Path, capsys) -> None:
     assert code == 0 and json.loads(out)["rounds"] == 80
 
 
-@pytest.mark.parametrize("content", [b"", b"hello", b"\x93NUMPY\x01\x00", b"PK\x03\x04", b"x,y,a,b\n0,0,0\n", b"x,y,a,b\n0,0,0,7\n"])
+@pytest.mark.parametrize(
+    "content", [b"", b"hello", b"\x93NUMPY\x01\x00", b"PK\x03\x04", b"x,y,a,b\n0,0,0\n", b"x,y,a,b\n0,0,0,7\n"]
+)
 def test_broken_files_are_refused_without_a_traceback(content: bytes, tmp_path: Path, capsys) -> None:
     """Whatever a file holds, the answer is a sentence naming it."""
     path = tmp_path / "broken.dat"
@@ -167,6 +230,7 @@ def test_a_missing_file_is_named(tmp_path: Path, capsys) -> None:
 
 
 # ---- plan and declare
+
 
 def test_plan_compares_methods(capsys) -> None:
     """Without a method all are compared, and more score gives more bits."""
@@ -189,10 +253,16 @@ def test_plan_finds_the_rounds_a_length_needs(capsys) -> None:
         assert (json.loads(out)["plans"][0]["certified_length"] >= 100_000) == enough
 
 
-@pytest.mark.parametrize("options, word", [
-    (["--score", "0.75"], "local bound"), (["--score", "0.9"], "Tsirelson"), (["--score", "0.8", "--length", "5"], "either"),
-    (["--score", "0.8", "--method", "eat-2018", "--output-rule", "credit"], "eat-2018"), (["--score", "0.8", "--order", "3"], "order"),
-])
+@pytest.mark.parametrize(
+    "options, word",
+    [
+        (["--score", "0.75"], "local bound"),
+        (["--score", "0.9"], "Tsirelson"),
+        (["--score", "0.8", "--length", "5"], "either"),
+        (["--score", "0.8", "--method", "eat-2018", "--output-rule", "credit"], "eat-2018"),
+        (["--score", "0.8", "--order", "3"], "order"),
+    ],
+)
 def test_plans_that_cannot_be_are_refused_in_words(options: list[str], word: str, capsys) -> None:
     """Scores out of range and combinations no method covers are input errors."""
     code, _, err = run(capsys, "plan", "--rounds", "1e6", "--soundness", "1e-6", *options)
@@ -201,7 +271,9 @@ def test_plans_that_cannot_be_are_refused_in_words(options: list[str], word: str
 
 def test_a_method_that_does_not_apply_is_listed_with_its_reason(capsys) -> None:
     """In a comparison the methods that cannot do it say why, and the others go on."""
-    code, out, _ = run(capsys, "plan", "--rounds", "1e7", "--score", "0.8", "--soundness", "1e-9", "--output-rule", "credit", "--json")
+    code, out, _ = run(
+        capsys, "plan", "--rounds", "1e7", "--score", "0.8", "--soundness", "1e-9", "--output-rule", "credit", "--json"
+    )
     result = json.loads(out)
     assert code == 0 and [plan["method"] for plan in result["plans"]] == ["factor-closed"]
     assert {item["method"] for item in result["not_applicable"]} == {"eat-2018", "eat-2019"}
@@ -210,8 +282,22 @@ def test_a_method_that_does_not_apply_is_listed_with_its_reason(capsys) -> None:
 def test_a_declaration_is_never_replaced(lab: Path, capsys) -> None:
     """An existing declaration file stays as it is."""
     before = (lab / "run.json").read_bytes()
-    code, _, err = run(capsys, "declare", "--rig", "r", "--rounds", 1000, "--score", 0.8, "--method", "factor-closed",
-                       "--soundness", 1e-3, "--out", lab / "run.json")
+    code, _, err = run(
+        capsys,
+        "declare",
+        "--rig",
+        "r",
+        "--rounds",
+        1000,
+        "--score",
+        0.8,
+        "--method",
+        "factor-closed",
+        "--soundness",
+        1e-3,
+        "--out",
+        lab / "run.json",
+    )
     assert code == 2 and "exists" in err and (lab / "run.json").read_bytes() == before
 
 
@@ -224,27 +310,43 @@ def test_a_declaration_remembers_its_calibration(lab: Path) -> None:
 
 # ---- certify
 
+
 def test_certify_makes_certificate_bits_and_seed(lab: Path, tmp_path: Path, capsys) -> None:
     """The whole chain on files; the same seed gives the same bits, from any split of the rounds."""
-    code, out, _ = run(capsys, "certify", *good_files(lab), "--declaration", lab / "run.json", "--out", tmp_path / "one", "--json")
+    code, out, _ = run(
+        capsys, "certify", *good_files(lab), "--declaration", lab / "run.json", "--out", tmp_path / "one", "--json"
+    )
     result = json.loads(out)
     assert code == 0 and result["outcome"] == "certified" and result["seed_drawn"]
     certificate = certificate_from(json.loads((tmp_path / "one/certificate.json").read_bytes()))
     bits, seed = (tmp_path / "one/bits.bin").read_bytes(), (tmp_path / "one/seed.bin").read_bytes()
-    assert certificate.certified_length == 20_000 and len(bits) == 2500 and len(seed) == (certificate.seed_bits + 7) // 8
+    assert (
+        certificate.certified_length == 20_000 and len(bits) == 2500 and len(seed) == (certificate.seed_bits + 7) // 8
+    )
     assert 8000 < sum(byte.bit_count() for byte in bits) < 12_000
     for name in ("bits.bin", "seed.bin"):
         assert (tmp_path / "one" / name).stat().st_mode & 0o777 == 0o600
     run(capsys, "simulate", "--rounds", ROUNDS, "--visibility", 0.98, "--seed", 7, "--out", tmp_path / "whole")
-    code, _, _ = run(capsys, "certify", tmp_path / "whole/rounds-0001.npz", "--declaration", lab / "run.json",
-                     "--seed", tmp_path / "one/seed.bin", "--out", tmp_path / "two")
+    code, _, _ = run(
+        capsys,
+        "certify",
+        tmp_path / "whole/rounds-0001.npz",
+        "--declaration",
+        lab / "run.json",
+        "--seed",
+        tmp_path / "one/seed.bin",
+        "--out",
+        tmp_path / "two",
+    )
     assert code == 0 and (tmp_path / "two/bits.bin").read_bytes() == bits
     assert (tmp_path / "two/certificate.json").read_bytes() == (tmp_path / "one/certificate.json").read_bytes()
 
 
 def test_a_refusal_has_exit_code_one_and_no_bits(lab: Path, tmp_path: Path, capsys) -> None:
     """A local rig is refused with its numbers: a certificate that says so, no seed, no bits."""
-    code, out, _ = run(capsys, "certify", lab / "local/rounds-0001.npz", "--declaration", lab / "run.json", "--out", tmp_path)
+    code, out, _ = run(
+        capsys, "certify", lab / "local/rounds-0001.npz", "--declaration", lab / "run.json", "--out", tmp_path
+    )
     assert code == 1 and "refused" in out
     assert all(len(line) <= 80 for line in out.splitlines() if str(tmp_path) not in line)
     assert [path.name for path in tmp_path.iterdir()] == ["certificate.json"]
@@ -263,19 +365,45 @@ def test_a_seed_of_the_wrong_length_is_refused(change, lab: Path, tmp_path: Path
     """Too short, too long or empty: the seed must have exactly the length the certificate asks for."""
     seed = tmp_path / "seed.bin"
     seed.write_bytes(change(bytes((2 * ROUNDS + 20_000 - 1 + 7) // 8)))
-    code, _, err = run(capsys, "certify", *good_files(lab), "--declaration", lab / "run.json", "--seed", seed, "--out", tmp_path / "out")
+    code, _, err = run(
+        capsys,
+        "certify",
+        *good_files(lab),
+        "--declaration",
+        lab / "run.json",
+        "--seed",
+        seed,
+        "--out",
+        tmp_path / "out",
+    )
     assert code == 2 and "seed" in err and not (tmp_path / "out/bits.bin").exists()
 
 
 def test_more_rounds_than_declared_are_refused(lab: Path, tmp_path: Path, capsys) -> None:
     """Nothing is dropped: surplus rounds are an input error."""
-    code, _, err = run(capsys, "certify", *good_files(lab), lab / "local/rounds-0001.npz", "--declaration", lab / "run.json", "--out", tmp_path)
+    code, _, err = run(
+        capsys,
+        "certify",
+        *good_files(lab),
+        lab / "local/rounds-0001.npz",
+        "--declaration",
+        lab / "run.json",
+        "--out",
+        tmp_path,
+    )
     assert code == 2 and "declar" in err
 
 
-@pytest.mark.parametrize("text, word", [
-    ("{", "JSON"), ('{"format": "x", "format": "y"}', "twice"), ("[]", "object"), ('{"format": NaN}', "NaN"), ("{}", "/format"),
-])
+@pytest.mark.parametrize(
+    "text, word",
+    [
+        ("{", "JSON"),
+        ('{"format": "x", "format": "y"}', "twice"),
+        ("[]", "object"),
+        ('{"format": NaN}', "NaN"),
+        ("{}", "/format"),
+    ],
+)
 def test_a_broken_declaration_is_refused_in_words(text: str, word: str, lab: Path, tmp_path: Path, capsys) -> None:
     """Not JSON, a key twice, no object, NaN, a field missing: each says what and in which file."""
     path = tmp_path / "broken.json"
@@ -285,6 +413,7 @@ def test_a_broken_declaration_is_refused_in_words(text: str, word: str, lab: Pat
 
 
 # ---- the program itself
+
 
 def test_usage_errors_have_exit_code_two(capsys) -> None:
     """Unknown commands, missing options and shortened option names are usage errors."""

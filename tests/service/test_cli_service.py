@@ -30,14 +30,32 @@ class Lab:
 
     def declaration(self, name: str, *more: object) -> Path:
         path = self.folder / f"{name}.json"
-        command("declare", "--rig", "north table", "--rounds", ROUNDS, "--score", 0.84, "--method", "factor-closed", "--soundness", 1e-6,
-                "--length", LENGTH, "--out", path, *more)
+        command(
+            "declare",
+            "--rig",
+            "north table",
+            "--rounds",
+            ROUNDS,
+            "--score",
+            0.84,
+            "--method",
+            "factor-closed",
+            "--soundness",
+            1e-6,
+            "--length",
+            LENGTH,
+            "--out",
+            path,
+            *more,
+        )
         return path
 
 
 def command(*words: object) -> dict:
     """A command in a process of its own, expecting success; its JSON result."""
-    done = subprocess.run([sys.executable, "-m", "service.cli", *map(str, words), "--json"], capture_output=True, text=True, timeout=120)
+    done = subprocess.run(
+        [sys.executable, "-m", "service.cli", *map(str, words), "--json"], capture_output=True, text=True, timeout=120
+    )
     assert done.returncode == 0, done.stderr
     return json.loads(done.stdout)
 
@@ -46,13 +64,19 @@ def command(*words: object) -> dict:
 def lab(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Lab]:
     folder = tmp_path_factory.mktemp("service")
     with open(folder / "log", "wb") as log:
-        process = subprocess.Popen([sys.executable, "-m", "service.cli", "serve", "--data", folder / "data", "--port", "0", "--json"],
-                                   stdout=subprocess.PIPE, stderr=log, text=True)
+        process = subprocess.Popen(
+            [sys.executable, "-m", "service.cli", "serve", "--data", folder / "data", "--port", "0", "--json"],
+            stdout=subprocess.PIPE,
+            stderr=log,
+            text=True,
+        )
     try:
         line = process.stdout.readline()
         assert line, (folder / "log").read_text()
         token = command("token", "create", "anna", "--data", folder / "data")["token"]
-        command("simulate", "--rounds", ROUNDS, "--visibility", 0.98, "--seed", 7, "--segments", 3, "--out", folder / "good")
+        command(
+            "simulate", "--rounds", ROUNDS, "--visibility", 0.98, "--seed", 7, "--segments", 3, "--out", folder / "good"
+        )
         command("simulate", "--rounds", ROUNDS, "--local", "--seed", 8, "--out", folder / "local")
         yield Lab(folder, json.loads(line)["url"], token)
     finally:
@@ -88,10 +112,26 @@ def test_a_run_goes_from_files_to_verified_bits(lab: Lab, run, tmp_path: Path) -
     code, out, _ = run("collect", state["id"], "--out", tmp_path, "--json")
     assert code == 0 and json.loads(out)["state"] == "collected" and (tmp_path / "bits.bin").read_bytes() == kept
     assert {path.name for path in tmp_path.iterdir()} == {
-        "bits.bin", "bits-salt.hex", "seed.bin", "certificate.json", "report.json", "bundle.zip"}
+        "bits.bin",
+        "bits-salt.hex",
+        "seed.bin",
+        "certificate.json",
+        "report.json",
+        "bundle.zip",
+    }
 
-    everything = ["--rounds", *lab.files, "--seed", tmp_path / "seed.bin", "--bits", tmp_path / "bits.bin",
-                  "--bits-salt", tmp_path / "bits-salt.hex", "--key", lab.client.ledger_key()]
+    everything = [
+        "--rounds",
+        *lab.files,
+        "--seed",
+        tmp_path / "seed.bin",
+        "--bits",
+        tmp_path / "bits.bin",
+        "--bits-salt",
+        tmp_path / "bits-salt.hex",
+        "--key",
+        lab.client.ledger_key(),
+    ]
     code, out, err = run("verify", tmp_path / "bundle.zip", *everything)
     assert code == 0 and len(out.splitlines()) > 5, err
     code, out, _ = run("verify", tmp_path / "bundle.zip", *everything, "--json")
@@ -112,7 +152,9 @@ def test_a_changed_bundle_or_bits_fail_the_verification(lab: Lab, run, tmp_path:
     bits = bytearray((tmp_path / "bits.bin").read_bytes())
     bits[17] ^= 4
     (tmp_path / "wrong.bin").write_bytes(bits)
-    code, _, err = run("verify", tmp_path / "bundle.zip", "--bits", tmp_path / "wrong.bin", "--bits-salt", tmp_path / "bits-salt.hex")
+    code, _, err = run(
+        "verify", tmp_path / "bundle.zip", "--bits", tmp_path / "wrong.bin", "--bits-salt", tmp_path / "bits-salt.hex"
+    )
     assert code == 1 and "bits" in err and "Traceback" not in err
     bundle = bytearray((tmp_path / "bundle.zip").read_bytes())
     bundle[len(bundle) // 2] ^= 1
@@ -158,7 +200,9 @@ def test_other_files_cannot_replace_segments(lab: Lab, run) -> None:
 
 def test_a_refused_run_has_exit_code_one_and_documents(lab: Lab, run, tmp_path: Path) -> None:
     """A local rig is refused; its documents can be collected and verified, and there are no bits."""
-    code, out, err = run("submit", lab.folder / "local/rounds-0001.npz", "--declaration", lab.declaration("refused"), "--watch", "--json")
+    code, out, err = run(
+        "submit", lab.folder / "local/rounds-0001.npz", "--declaration", lab.declaration("refused"), "--watch", "--json"
+    )
     state = json.loads(out)
     assert code == 1 and state["state"] == "refused" and state["available_bits"] < 0, err
     assert run("watch", state["id"])[0] == 1
@@ -169,7 +213,7 @@ def test_a_refused_run_has_exit_code_one_and_documents(lab: Lab, run, tmp_path: 
 
 
 def test_an_uploaded_seed_is_sent_when_its_length_is_known(lab: Lab, run, tmp_path: Path) -> None:
-    """With seed source upload the run waits; a seed of the wrong length is refused here, the right one gives the bits."""
+    """With seed source upload the run waits; a seed of the wrong length is refused, the right one gives the bits."""
     declaration = lab.declaration("seeded", "--seed-source", "upload")
     seed = tmp_path / "seed.bin"
     seed.write_bytes(os.urandom((2 * ROUNDS + LENGTH - 1) // 8) + b"\x15")
@@ -188,7 +232,19 @@ def test_the_certificate_is_the_same_with_and_without_a_service(lab: Lab, run, t
     declaration = lab.declaration("same")
     state = json.loads(run("submit", *lab.files, "--declaration", declaration, "--watch", "--json")[1])
     assert run("collect", state["id"], "--out", tmp_path / "served")[0] == 0
-    assert run("certify", *lab.files, "--declaration", declaration, "--seed", tmp_path / "served/seed.bin", "--out", tmp_path / "alone")[0] == 0
+    assert (
+        run(
+            "certify",
+            *lab.files,
+            "--declaration",
+            declaration,
+            "--seed",
+            tmp_path / "served/seed.bin",
+            "--out",
+            tmp_path / "alone",
+        )[0]
+        == 0
+    )
     for name in ("certificate.json", "bits.bin"):
         assert (tmp_path / "served" / name).read_bytes() == (tmp_path / "alone" / name).read_bytes()
 
@@ -204,13 +260,20 @@ def test_a_broken_file_is_refused_with_its_name_and_row(lab: Lab, run, tmp_path:
 def test_tokens_are_listed_and_revoked(lab: Lab, run) -> None:
     """A revoked token opens nothing, an unknown id is told, and no secret is listed."""
     data = ["--data", lab.folder / "data"]
-    made = json.loads(run("token", "create", "guest", "--scope", "audit", "--days", "2", "--label", "for a day", *data, "--json")[1])
+    made = json.loads(
+        run("token", "create", "guest", "--scope", "audit", "--days", "2", "--label", "for a day", *data, "--json")[1]
+    )
     client = Client(lab.url, made["token"])
     with pytest.raises(ServiceProblem) as caught:
         client.declare({})
     assert caught.value.status == 403
     code, out, _ = run("token", "list", *data)
-    assert code == 0 and made["id"] in out and made["token"].split("_")[2] not in out and max(map(len, out.splitlines())) <= 80
+    assert (
+        code == 0
+        and made["id"] in out
+        and made["token"].split("_")[2] not in out
+        and max(map(len, out.splitlines())) <= 80
+    )
     assert run("token", "revoke", made["id"], *data)[0] == 0
     with pytest.raises(ServiceProblem) as caught:
         client.run("r1")

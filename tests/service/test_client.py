@@ -17,7 +17,7 @@ import pytest
 from service.client import Client, ServiceProblem
 from service.transport import digest_field, parse_events
 
-BITS = bytes(range(256)) * 10_000            # more than two pieces of a download
+BITS = bytes(range(256)) * 10_000  # more than two pieces of a download
 CUT = 2_500_000
 
 
@@ -121,7 +121,7 @@ def test_a_broken_connection_is_repeated_with_growing_pauses() -> None:
 
 
 def test_collecting_is_never_repeated() -> None:
-    """A confirmation may have arrived although its answer was lost; a second one would be answered as somebody else's."""
+    """A confirmation may have arrived although its answer was lost; a second one would look like somebody else's."""
     with scripted(Request.hang_up) as (url, seen), pytest.raises(ServiceProblem) as caught:
         client_at(url).collect("r1", bytes(32))
     assert caught.value.code == "unreachable" and len(seen) == 1
@@ -130,11 +130,24 @@ def test_collecting_is_never_repeated() -> None:
 def test_a_problem_document_arrives_with_all_its_parts() -> None:
     """Code, title, detail and the errors of a problem document are on the exception; a 4xx is not repeated."""
     errors = [{"pointer": "/rounds", "detail": "is missing"}]
-    with scripted(lambda r: r.json(422, {"code": "bad-document", "title": "Bad", "detail": "Look at rounds", "errors": errors},
-                                   "application/problem+json")) as (url, seen), pytest.raises(ServiceProblem) as caught:
+    with (
+        scripted(
+            lambda r: r.json(
+                422,
+                {"code": "bad-document", "title": "Bad", "detail": "Look at rounds", "errors": errors},
+                "application/problem+json",
+            )
+        ) as (url, seen),
+        pytest.raises(ServiceProblem) as caught,
+    ):
         client_at(url).declare({})
     problem = caught.value
-    assert (problem.code, problem.title, problem.detail, problem.status) == ("bad-document", "Bad", "Look at rounds", 422)
+    assert (problem.code, problem.title, problem.detail, problem.status) == (
+        "bad-document",
+        "Bad",
+        "Look at rounds",
+        422,
+    )
     assert list(problem.errors) == errors and len(seen) == 1
 
 
@@ -206,8 +219,9 @@ def test_an_upload_that_broke_is_sent_again_if_it_is_missing(tmp_path: Path) -> 
         request.hang_up()
 
     progress: list[int] = []
-    with scripted(cut, lambda r: r.json(200, {"segments": [], "rounds": 0}),
-                  lambda r: (r.body(), r.json(201, {"segment": 1}))) as (url, seen):
+    with scripted(
+        cut, lambda r: r.json(200, {"segments": [], "rounds": 0}), lambda r: (r.body(), r.json(201, {"segment": 1}))
+    ) as (url, seen):
         assert client_at(url).put_segment("r1", 1, file, progress.append) == {"segment": 1}
     assert [request.method for request in seen] == ["PUT", "GET", "PUT"]
     assert sum(progress) == len(BITS) and min(progress) < 0
@@ -217,8 +231,13 @@ def test_an_upload_refused_before_its_body_is_read_tells_why(tmp_path: Path) -> 
     """If the line closes during the upload because the token is wrong, the user hears about the token."""
     file = tmp_path / "rounds.npz"
     file.write_bytes(BITS)
-    with scripted(Request.hang_up, lambda r: r.json(401, {"code": "unauthorized", "title": "no valid token"})) as (url, _), \
-            pytest.raises(ServiceProblem) as caught:
+    with (
+        scripted(Request.hang_up, lambda r: r.json(401, {"code": "unauthorized", "title": "no valid token"})) as (
+            url,
+            _,
+        ),
+        pytest.raises(ServiceProblem) as caught,
+    ):
         client_at(url).put_segment("r1", 1, file)
     assert caught.value.code == "unauthorized"
 
@@ -227,8 +246,10 @@ def test_an_empty_file_is_sent_as_an_empty_body(tmp_path: Path) -> None:
     """An empty round file is for the service to refuse; the client sends it as it is."""
     file = tmp_path / "rounds.npz"
     file.write_bytes(b"")
-    with scripted(lambda r: r.json(422, {"code": "empty-file", "title": "empty"})) as (url, seen), \
-            pytest.raises(ServiceProblem) as caught:
+    with (
+        scripted(lambda r: r.json(422, {"code": "empty-file", "title": "empty"})) as (url, seen),
+        pytest.raises(ServiceProblem) as caught,
+    ):
         client_at(url).put_segment("r1", 1, file)
     assert caught.value.code == "empty-file" and seen[0].headers["Content-Length"] == "0"
 
@@ -264,8 +285,10 @@ def test_a_wrong_beginning_is_thrown_away_and_all_is_fetched_anew(wrong: bytes, 
 
 def test_a_damaged_download_is_refused(tmp_path: Path) -> None:
     """A whole download whose digest does not match is an error and leaves no file behind."""
-    with scripted(lambda r: r.answer(200, BITS, Repr_Digest=digest_field(bytes(32)))) as (url, _), \
-            pytest.raises(ServiceProblem) as caught:
+    with (
+        scripted(lambda r: r.answer(200, BITS, Repr_Digest=digest_field(bytes(32)))) as (url, _),
+        pytest.raises(ServiceProblem) as caught,
+    ):
         client_at(url).get_bits("r1", tmp_path / "bits.bin")
     assert caught.value.code == "digest-mismatch" and not list(tmp_path.iterdir())
 
@@ -283,6 +306,7 @@ def event(number: int, state: str) -> bytes:
 
 def test_watching_goes_on_after_the_last_event_seen() -> None:
     """A stream that breaks is taken up again with Last-Event-ID, until a final state arrives."""
+
     def stream(*events: bytes) -> Callable[[Request], None]:
         return lambda r: r.answer(200, b"".join(events), Content_Type="text/event-stream")
 
@@ -293,15 +317,19 @@ def test_watching_goes_on_after_the_last_event_seen() -> None:
 
 def test_watching_falls_back_to_asking_where_events_do_not_pass() -> None:
     """Behind a proxy that refuses event streams the run is polled instead."""
-    refuse = (lambda r: r.json(406, {"code": "no-events", "title": "no"}))
-    with scripted(refuse, refuse, lambda r: r.json(200, {"state": "working"}), lambda r: r.json(200, {"state": "refused"})) as (url, _):
+    refuse = lambda r: r.json(406, {"code": "no-events", "title": "no"})
+    with scripted(
+        refuse, refuse, lambda r: r.json(200, {"state": "working"}), lambda r: r.json(200, {"state": "refused"})
+    ) as (url, _):
         assert [run["state"] for run in client_at(url).watch("r1")] == ["working", "refused"]
 
 
 def test_watching_an_unknown_run_says_so_at_once() -> None:
     """404 is not a reason to poll."""
-    with scripted(lambda r: r.json(404, {"code": "not-found", "title": "no such run"})) as (url, _), \
-            pytest.raises(ServiceProblem) as caught:
+    with (
+        scripted(lambda r: r.json(404, {"code": "not-found", "title": "no such run"})) as (url, _),
+        pytest.raises(ServiceProblem) as caught,
+    ):
         list(client_at(url).watch("r1"))
     assert caught.value.code == "not-found"
 
@@ -309,8 +337,10 @@ def test_watching_an_unknown_run_says_so_at_once() -> None:
 @pytest.mark.parametrize("size", [1, 2, 7, 1000])
 @pytest.mark.parametrize("end", ["\n", "\r\n"])
 def test_events_are_read_however_they_are_cut(size: int, end: str) -> None:
-    """Pieces may end anywhere, lines may end in LF or CRLF; comments and other events are passed over, cut ones dropped."""
-    text = ': hello\n\nid: 7\nevent: run\ndata: {"state":\ndata: "ä"}\n\nevent: other\ndata: 1\n\nevent: run\ndata: {"sta'
+    """Pieces may end anywhere, lines may end in LF or CRLF; comments, other and cut events are dropped."""
+    text = (
+        ': hello\n\nid: 7\nevent: run\ndata: {"state":\ndata: "ä"}\n\nevent: other\ndata: 1\n\nevent: run\ndata: {"sta'
+    )
     data = text.replace("\n", end).encode()
-    pieces = [data[i:i + size] for i in range(0, len(data), size)]
+    pieces = [data[i : i + size] for i in range(0, len(data), size)]
     assert list(parse_events(pieces)) == [("7", {"state": "ä"})]
