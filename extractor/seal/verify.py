@@ -147,7 +147,11 @@ def _signed_report(files: dict[str, bytes], verifier: note.Verifier, log: _Log) 
     report = _document(files, "report.json")
     if report.get("format") != REPORT_FORMAT:
         raise ProofError(f"report.json is not a {REPORT_FORMAT!r}", code="bad-report")
-    log.right("signature", f"{verifier.name} signed exactly this report.")
+    for name in ("declaration", "certificate"):
+        claimed = report.get(name)
+        if not isinstance(claimed, dict) or claimed.get("digest") != canonical.bytes_digest(files[f"{name}.json"]):
+            raise ProofError(f"{name}.json is not the {name} of the report: its digest is another", code="disagreement")
+    log.right("signature", f"{verifier.name} signed exactly this report, with this declaration and this certificate.")
     return report
 
 
@@ -168,10 +172,6 @@ def _ledger(files: dict[str, bytes], verifier: note.Verifier, log: _Log) -> list
 
 def _papers(files: dict[str, bytes], report: dict[str, Any], log: _Log) -> _Papers:
     """Declaration and certificate as the report repeats them, and the report as they make it."""
-    for name in ("declaration", "certificate"):
-        claimed = report.get(name)
-        if not isinstance(claimed, dict) or claimed.get("digest") != canonical.bytes_digest(files[f"{name}.json"]):
-            raise ProofError(f"{name}.json is not the {name} of the report: its digest is another", code="disagreement")
     with _reading("declaration.json"):
         document = canonical.parse(files["declaration.json"], require_canonical=True)
         declaration = documents.declaration_from(document)
@@ -206,8 +206,8 @@ def _trail(files: dict[str, bytes], papers: _Papers, found: list[tuple[int, entr
     if certificate.outcome == "certified":
         trail.check_bodies(by_kind, {"seed": report["seed"],
                                      "collection": {"bits_commitment": report["output"]["bits_commitment"]}})
-    log.right("order", f"declared {by_kind['declaration'].time}, sealed {by_kind['seal'].time}; each step after the one "
-                       "before it in the ledger.")
+    log.right("order", f"declared {by_kind['declaration'].time}, sealed {by_kind['seal'].time}; each step after the "
+                       "one before it in the ledger.")
     log.right("commitments", "declaration, records and certificate are those the ledger fixed." if listed
               else "declaration and certificate are those the ledger fixed.")
 

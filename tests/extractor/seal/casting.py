@@ -99,7 +99,7 @@ class Run:
     def contents(self, *, trail: list[entries.Entry] | None = None,
                  change: Callable[[dict[str, Any]], None] | None = None, signer: note.Signer = SIGNER,
                  checkpoint_signer: note.Signer | None = None) -> dict[str, bytes]:
-        """The files of the bundle; `change` alters the report before it is signed, `trail` replaces the ledger entries."""
+        """The files of the bundle; `change` alters the report before it is signed, `trail` replaces the entries."""
         trail = self.entries() if trail is None else trail
         log, placed = Log(), []
 
