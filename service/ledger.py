@@ -89,6 +89,17 @@ class Ledger:
         transaction.after_commit(lambda: self._keep_copy(size + 1, signed))
         return size
 
+    @property
+    def signer(self) -> note.Signer:
+        """Signs reports with the ledger's key."""
+        return self._signer
+
+    def time(self, reading: Reading, now: str) -> str:
+        """`now`, but never before the newest entry: a clock that was set back must not make the log contradict itself."""
+        head = reading.ledger_head()
+        newest = reading.ledger_entry(head.size - 1) if head else None
+        return now if newest is None else max(now, newest.time)
+
     def checkpoint(self) -> str:
         """The newest signed checkpoint (of an empty tree before the first entry)."""
         with self._store.read() as reading:
@@ -118,6 +129,10 @@ class Ledger:
             if not 0 <= index < size:
                 raise InputError(f"entry {index} is not among the first {size}", code="out-of-range", field="index")
             return list(merkle.prove_inclusion(index, size, reading.ledger_nodes))
+
+    def prove(self, reading: Reading, index: int, size: int) -> list[bytes]:
+        """The same within a snapshot that is already open."""
+        return list(merkle.prove_inclusion(index, size, reading.ledger_nodes))
 
     def consistency(self, old: int, size: int) -> list[bytes]:
         """Proof hashes that the tree of `size` entries continues the tree of `old`, 1 <= old <= size."""

@@ -1,0 +1,61 @@
+"""/v1/ledger: the signed log, for anybody with a token. It names objects and commitments, no contents."""
+
+from __future__ import annotations
+
+import base64
+from typing import Annotated, Any
+
+from fastapi import APIRouter, Query
+from fastapi.responses import PlainTextResponse
+
+from extractor.errors import InputError
+from extractor.seal import canonical
+from service.api import schemas
+from service.api.auth import Anybody, PartsOf
+from service.api.bodies import StrictRoute
+from service.api.problems import documented
+from service.ledger import ENTRIES_LIMIT
+
+router = APIRouter(prefix="/v1/ledger", tags=["ledger"], route_class=StrictRoute)
+Place = Annotated[int | None, Query(ge=0, le=2**53 - 1)]
+_TEXT = {"content": {"text/plain": {"schema": {"type": "string"}}}}
+
+
+@router.get("/checkpoint", operation_id="read_checkpoint", summary="The newest checkpoint, a signed note", response_class=PlainTextResponse,
+            responses={200: {"description": "C2SP tlog-checkpoint", **_TEXT}, **documented(401)})
+def checkpoint(parts: PartsOf, identity: Anybody) -> Any:
+    return parts.ledger.checkpoint()
+
+
+@router.get("/key", operation_id="read_ledger_key", summary="The key that signs the checkpoints", response_class=PlainTextResponse,
+            responses={200: {"description": "C2SP signed-note verifier key", **_TEXT}, **documented(401)})
+def key(parts: PartsOf, identity: Anybody) -> Any:
+    return parts.ledger.verifier_text + "\n"
+
+
+@router.get("/entries", response_model=schemas.LedgerEntries, operation_id="read_entries",
+            summary="Entries start <= index < end", responses=documented(401, 422))
+def entries(parts: PartsOf, identity: Anybody, start: Place = 0, end: Place = None) -> Any:
+    """At most 1000 at once; without `end`, as many as there are."""
+    size = parts.ledger.size()
+    start = start or 0
+    stop = min(size, start + ENTRIES_LIMIT) if end is None else end
+    rows = parts.ledger.entries(start, stop) if size or end is not None or start else []
+    return {"size": size, "start": start, "entries": [
+        {"index": row.index, "entry": canonical.parse(row.entry), "leaf_hash": _text(row.leaf_hash)} for row in rows]}
+
+
+@router.get("/proof", response_model=schemas.LedgerProof, response_model_exclude_none=True, operation_id="read_proof",
+            summary="Inclusion of an entry (index) or consistency of two trees (old)", responses=documented(401, 422))
+def proof(parts: PartsOf, identity: Anybody, size: Place = None, index: Place = None, old: Place = None) -> Any:
+    """RFC 9162 proofs in the tree of the first `size` entries; without `size`, in the newest tree."""
+    if (index is None) == (old is None):
+        raise InputError("give either index or old", code="bad-usage", field="index")
+    size = parts.ledger.size() if size is None else size
+    if index is not None:
+        return {"kind": "inclusion", "size": size, "index": index, "hashes": [*map(_text, parts.ledger.inclusion(index, size))]}
+    return {"kind": "consistency", "size": size, "old": old, "hashes": [*map(_text, parts.ledger.consistency(old or 0, size))]}
+
+
+def _text(value: bytes) -> str:
+    return base64.b64encode(value).decode()
