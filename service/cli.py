@@ -36,7 +36,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
 
     args = build_parser().parse_args(arguments)
     try:
-        return args.run(args)
+        return args.handler(args)
     except InputError as fault:
         note(f"bellassay: {fault}")
         return BAD_INPUT

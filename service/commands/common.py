@@ -50,7 +50,7 @@ def add_command(
     text = textwrap.fill(" ".join(paragraph.split()), WIDTH - 2)
     lines = "\n".join("  " + line for line in textwrap.dedent(example).strip().splitlines())
     parser = commands.add_parser(name, help=summary, description=text, epilog=f"example:\n{lines}")
-    parser.set_defaults(run=run)
+    parser.set_defaults(handler=run)
     if prints_result:
         parser.add_argument(
             "--json", action="store_true", help="print one JSON object on standard output, all else on standard error"

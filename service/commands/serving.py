@@ -4,7 +4,10 @@ from __future__ import annotations
 
 import argparse
 import json
+import logging
 import os
+from collections.abc import Iterator
+from contextlib import contextmanager
 from typing import Any
 
 from extractor.errors import InputError
@@ -157,6 +160,7 @@ def work(args: argparse.Namespace) -> int:
     from service.jobs.worker import run_worker
 
     settings = _settings(args)
+    logging.basicConfig(level=settings.log_level.upper(), format="%(asctime)s %(levelname)s %(name)s %(message)s")
     if not args.once:
         note(f"working on {settings.data.resolve()}; stop with Ctrl-C")
 
@@ -178,22 +182,27 @@ def _operator_acts(run: Any) -> int:
         return BAD_INPUT
 
 
-def _opened(args: argparse.Namespace) -> Any:
-    from service.app import open_parts
+@contextmanager
+def _store(settings: Any) -> Iterator[Any]:
+    from service.app import open_store
 
-    return open_parts(_settings(args))
+    store = open_store(settings)
+    try:
+        yield store
+    finally:
+        store.close()
 
 
 def create_token(args: argparse.Namespace) -> int:
     from service.clock import now_s, now_text
     from service.custody.tokens import new_token
 
-    parts = _opened(args)
-    days = args.days if args.days is not None else parts.settings.token_days
+    settings = _settings(args)
+    days = args.days if args.days is not None else settings.token_days
     if days <= 0:
         raise InputError("must be above 0", code="out-of-range", field="--days")
     scopes = args.scope or ["submit", "collect", "audit"]
-    with parts.store.write() as transaction:
+    with _store(settings) as store, store.write() as transaction:
         text, row = new_token(
             transaction,
             owner=args.owner,
@@ -205,13 +214,11 @@ def create_token(args: argparse.Namespace) -> int:
     emit(args, {"token": text} | _token_document(row), [text])
     note(f"owner {row.owner}, scopes {', '.join(row.scopes)}, {days:g} days; it is shown only now")
     note("use it as: export BELLASSAY_TOKEN=TOKEN")
-    parts.close()
     return DONE
 
 
 def list_tokens(args: argparse.Namespace) -> int:
-    parts = _opened(args)
-    with parts.store.read() as reading:
+    with _store(_settings(args)) as store, store.read() as reading:
         found = reading.list_tokens()
     lines: list[str] = []
     for row in found:
@@ -227,7 +234,6 @@ def list_tokens(args: argparse.Namespace) -> int:
             ]
         )
     emit(args, {"tokens": [_token_document(row) for row in found]}, lines or ["no tokens yet"])
-    parts.close()
     return DONE
 
 
@@ -235,8 +241,7 @@ def revoke_token(args: argparse.Namespace) -> int:
     from service.clock import now_text
 
     token_id = args.token_id.split("_")[1] if args.token_id.count("_") == 2 else args.token_id
-    parts = _opened(args)
-    with parts.store.write() as transaction:
+    with _store(_settings(args)) as store, store.write() as transaction:
         known = transaction.get_token(token_id)
         if known is None:
             raise InputError("there is no token with this id (bellassay token list)", code="no-token")
@@ -246,7 +251,6 @@ def revoke_token(args: argparse.Namespace) -> int:
         {"id": token_id, "revoked": True, "before": not revoked},
         ["revoked" if revoked else "had been revoked before"],
     )
-    parts.close()
     return DONE
 
 
