@@ -10,6 +10,7 @@ from __future__ import annotations
 import dataclasses
 import logging
 import os
+import signal
 import socket
 import subprocess
 import sys
@@ -18,6 +19,7 @@ import time
 from collections.abc import Callable
 from pathlib import Path
 from types import FrameType
+from typing import Any
 
 import uvicorn
 
@@ -29,7 +31,7 @@ log = logging.getLogger("bellassay.supervisor")
 SHORT_LIFE_S, LONGEST_PAUSE_S = 2.0, 10.0
 KEEP_ALIVE_S = 15
 BACKLOG = 1024
-STORAGE_FAILED = 1          # exit code
+STORAGE_FAILED, STARTUP_FAILED = 1, 3          # exit codes
 
 
 class Supervisor:
@@ -134,6 +136,7 @@ def serve(settings: ServiceSettings, *, on_listening: Callable[[str], None] | No
     host, port = sock.getsockname()[:2]
     shown = f"[{host}]" if ":" in host else host
     supervisor.start()
+    handlers = _own_signals()
     announcer = threading.Thread(target=_announce, args=(server, f"http://{shown}:{port}", on_listening), daemon=True)
     announcer.start()
     try:
@@ -141,7 +144,16 @@ def serve(settings: ServiceSettings, *, on_listening: Callable[[str], None] | No
     finally:
         supervisor.stop()
         sock.close()
-    return code
+        for number, handler in handlers.items():
+            signal.signal(number, handler)
+    return code if server.started else STARTUP_FAILED
+
+
+def _own_signals() -> dict[int, Any]:
+    """The server hands a signal on when it has ended; by default that would end this process before its workers."""
+    if threading.current_thread() is not threading.main_thread():
+        return {}
+    return {number: signal.signal(number, lambda *_: None) for number in (signal.SIGTERM, signal.SIGINT)}
 
 
 def make_server(app: object, settings: ServiceSettings) -> uvicorn.Server:

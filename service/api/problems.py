@@ -69,7 +69,8 @@ def problem_of(fault: Exception) -> Problem:
         case Gone() | KeyErased():
             return Problem(410, fault.code, fault.message)
         case BrokenTransfer():
-            return Problem(_TRANSFER.get(fault.code, 400), fault.code, fault.message, headers={"Connection": "close"})
+            return Problem(_TRANSFER.get(fault.code, 400), fault.code, fault.message,
+                           headers={"Connection": "close"} if fault.code == "upload-too-slow" else None)
         case Unavailable():
             return Problem(507 if fault.code == "disk-full" else 503, fault.code, fault.message, retry_after_s=fault.retry_after_s)
         case StorageFailed():

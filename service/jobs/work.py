@@ -115,7 +115,6 @@ class Work:
 
     def _commit(self, row: RunRow, state: str, stage: str | None, changes: Mapping[str, Any],
                 entries: Sequence[tuple[str, Mapping[str, Any]]]) -> None:
-        self.check()
         with self.parts.store.write() as transaction:
             self._must(states.move(transaction, row, state, changes, stage=stage, holder=self.worker))
             self._append(transaction, entries)
