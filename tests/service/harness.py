@@ -6,7 +6,6 @@ import base64
 import functools
 import hashlib
 import io
-import socket
 import threading
 import time
 from collections.abc import Sequence
@@ -27,7 +26,7 @@ from service.custody.tokens import new_token
 from service.jobs.worker import Worker
 from service.parts import Parts
 from service.settings import ServiceSettings
-from service.supervisor import make_server
+from service.supervisor import bind, make_server
 
 ROUNDS = 20_000
 ALL_SCOPES = ("submit", "collect", "audit")
@@ -142,7 +141,7 @@ class Service:
         self.settings = settings(folder, **changed)
         self.app = create_app(self.settings)
         self.parts: Parts = self.app.state.parts
-        self._socket = socket.create_server(("127.0.0.1", 0))
+        self._socket = bind("127.0.0.1", 0)
         self.url = f"http://127.0.0.1:{self._socket.getsockname()[1]}"
         self._server = make_server(self.app, self.settings)
         self._thread = threading.Thread(target=self._server.run, kwargs={"sockets": [self._socket]}, daemon=True)
