@@ -172,6 +172,12 @@ def test_a_forged_certificate_is_refused(changes) -> None:
     fails("the certificate is not what declaration and tally give", forged.bundle())
 
 
+def test_an_outcome_that_does_not_exist_is_refused() -> None:
+    """A certificate is certified or refused; a third word has no rules by which it could be checked."""
+    run = casting.certified()
+    fails("/certificate/document/outcome", run.refit(replace(run.certificate, outcome="postponed")).bundle())
+
+
 def test_a_refusal_turned_into_a_certificate_is_refused() -> None:
     """A run that earned too little stays refused whatever is signed."""
     run = casting.refused()
@@ -221,7 +227,7 @@ def test_signed_nonsense_is_a_proof_error(name) -> None:
     good = (documents.declaration_document(run.declaration) if name == "declaration"
             else documents.certificate_document(run.certificate))
     for field in (*good, "more"):
-        for value in (None, [], {}, "x", -1, 1e300, True, [{}], {"x": []}, [[]]):
+        for value in (None, [{}], "x", 1e300):
             if field in good and canonical.canonical_bytes(good[field]) == canonical.canonical_bytes(value):
                 continue
             altered = good | {field: value}
