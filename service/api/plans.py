@@ -20,7 +20,8 @@ router = APIRouter(prefix="/v1/plan", tags=["planning"], route_class=StrictRoute
 _ALWAYS_WRONG = ("score-out-of-range", "out-of-range", "bad-number", "bad-settings")      # whatever the method
 
 
-@router.post("", response_model=schemas.Plans, operation_id="plan", summary="Expected certified length, or the rounds a length needs",
+@router.post("", response_model=schemas.Plans, operation_id="plan",
+             summary="Expected certified length, or the rounds a length needs",
              responses=documented(400, 401, 415, 422))
 def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
     """With `rounds`: what they may be expected to certify, per method. With `length`: how many rounds that takes."""
@@ -29,7 +30,8 @@ def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
     if (body.score is None) == (body.calibration is None):
         raise InputError("give either score or calibration", code="bad-usage", field="/score")
     s = body.settings
-    common = dict(score=_score(body), settings=Settings(s.test_probability, tuple(s.distribution), tuple(s.generation), s.bias),
+    settings = Settings(s.test_probability, tuple(s.distribution), tuple(s.generation), s.bias)
+    common = dict(score=_score(body), settings=settings,
                   soundness=body.soundness, output_rule=body.output_rule, disclosure=body.disclosure, order=body.order,
                   confidence=body.confidence)
     plans, others = [], []
