@@ -25,6 +25,7 @@ import uvicorn
 
 from extractor.errors import InputError
 from service.app import create_app
+from service.connections import Connection
 from service.settings import PREFIX, ServiceSettings
 
 log = logging.getLogger("bellassay.supervisor")
@@ -160,7 +161,7 @@ def _own_signals() -> dict[int, Any]:
 def make_server(app: object, settings: ServiceSettings) -> uvicorn.Server:
     """The HTTP server for the application, with its limits."""
     config = uvicorn.Config(
-        app, http="httptools", ws="none", lifespan="on", log_config=None, access_log=False, server_header=False,
+        app, http=Connection, ws="none", lifespan="on", log_config=None, access_log=False, server_header=False,
         proxy_headers=False,
         limit_concurrency=settings.connections, backlog=BACKLOG, timeout_keep_alive=KEEP_ALIVE_S,
         timeout_graceful_shutdown=max(1, int(settings.stop_s)))
