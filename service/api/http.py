@@ -119,9 +119,10 @@ def _openapi(app: FastAPI) -> dict[str, Any]:
 
 
 def _only_problems(operation: dict[str, Any]) -> None:
-    """The framework documents its own 422; ours is a problem like the others."""
+    """The framework documents its own 422; ours is a problem like the others. Any operation may find the service busy."""
+    operation["responses"].setdefault("default", {"description": "any other problem"})
     for status, answer in operation.get("responses", {}).items():
-        if status.startswith(("4", "5")):
+        if status.startswith(("4", "5", "default")):
             answer["content"] = {problems.MEDIA_TYPE: {"schema": {"$ref": "#/components/schemas/Problem"}}}
 
 

@@ -41,7 +41,7 @@ def open_(body: schemas.NewRun, parts: PartsOf, identity: Submitter, response: R
     finally:
         if answer is None or answer["id"] != run_id:        # answered before, or not at all: the new key is of no use
             parts.keys.erase(run_id)
-            parts.blobs.remove_secrets(run_id)
+            parts.blobs.discard(run_id)
     response.headers["Location"] = f"/v1/runs/{answer['id']}"
     return answer
 

@@ -114,7 +114,7 @@ def test_the_description_is_complete(service: Service) -> None:
             success = [answer for status, answer in operation["responses"].items() if status.startswith("2")]
             assert success and all(answer.get("content") or answer["description"] for answer in success), path
             for status, answer in operation["responses"].items():
-                if status.startswith(("4", "5")):
+                if status.startswith(("4", "5", "default")):
                     assert answer["content"] == {
                         "application/problem+json": {"schema": {"$ref": "#/components/schemas/Problem"}}}
             assert path in ("/livez", "/readyz") or operation["security"] and "401" in operation["responses"], path
