@@ -7,12 +7,13 @@ import hashlib
 import io
 import json
 import threading
+from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
 from extractor.seal import canonical
 from extractor.seal.verify import verify_bundle
-from service.collection import finish_erasures
+from service.collection import erase, finish_erasures
 from service.jobs import states
 from tests.service.harness import ROUNDS, Caller, Service, digest_header, document, npz, problem, split_npz
 
@@ -176,6 +177,22 @@ def test_an_interrupted_erasure_is_finished(service: Service, north: Caller) -> 
     assert finish_erasures(service.parts) == 1
     assert_erased(service, north, run)
     assert finish_erasures(service.parts) == 0
+
+
+def test_many_may_finish_an_erasure(service: Service, north: Caller) -> None:
+    """The request that collected and idle workers may erase at the same time: one ledger entry, nothing left."""
+    run = north.sealed_run(files=split_npz(4_000))
+    service.work()
+    with service.parts.store.write() as transaction:
+        row = transaction.get_run(run)
+        states.move(transaction, row, "collected", {"collected_time": row.finished_time})
+        service.parts.ledger.append(transaction, "collection", run, {"bits_commitment": row.bits_commitment},
+                                    row.finished_time)
+    with ThreadPoolExecutor(6) as threads:
+        assert [*threads.map(lambda _: erase(service.parts, run), range(6))] == [None] * 6
+    assert_erased(service, north, run)
+    entries = [one["entry"] for one in north.get("/v1/ledger/entries").json()["entries"]]
+    assert [entry["kind"] for entry in entries if entry["subject"] == run][-2:] == ["collection", "erasure"]
 
 
 def test_a_refused_run_has_a_report_and_no_bits(service: Service, north: Caller) -> None:
