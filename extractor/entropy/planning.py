@@ -6,7 +6,7 @@ import math
 from dataclasses import asdict, dataclass, replace
 from typing import Any
 
-from scipy import stats
+from scipy import special
 
 from extractor.errors import InputError
 from extractor.entropy import bound, lengths, search
@@ -191,8 +191,8 @@ def _quantile(n: int, p: float, level: float) -> int:
     if level == 0.5:
         return math.floor(n * p)
     if n < 10**9:
-        return int(stats.binom.ppf(level, n, p))
-    return min(max(math.floor(n * p + stats.norm.ppf(level) * math.sqrt(n * p * (1 - p))), 0), n)
+        return min(max(math.ceil(float(special.bdtrik(level, n, p))), 0), n)
+    return min(max(math.floor(n * p + float(special.ndtri(level)) * math.sqrt(n * p * (1 - p))), 0), n)
 
 
 def _expected(declaration: Declaration, score: float, confidence: float) -> Tally:
