@@ -6,12 +6,13 @@ Reading is strict: an unknown or missing field is an `InputError` with a JSON po
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from typing import Any
 
 from extractor.errors import InputError
 from extractor.model import (
-    CELLS, Acceptance, CellCredit, Certificate, Convention, Declaration, ScoreTable, Settings, Tally, Term,
+    CELLS, MAXIMUM_ROUNDS, Acceptance, CellCredit, Certificate, Convention, Declaration, ScoreTable, Settings, Tally, Term,
     cell_index, cells,
 )
 
@@ -103,8 +104,10 @@ def declaration_from(document: object) -> Declaration:
         calibration = _Fields(calibration_value, "/calibration")
         digest, calibration_rounds = calibration.take("digest"), calibration.take("rounds")
         calibration.done()
-        if not isinstance(digest, str) or not digest.startswith("sha256:") or len(digest) != 71:
+        if not isinstance(digest, str) or not re.fullmatch(r"sha256:[0-9a-f]{64}", digest):
             raise InputError("is not sha256: and 64 hexadecimal digits", code="bad-digest", field="/calibration/digest")
+        if type(calibration_rounds) is not int or not 1 <= calibration_rounds <= MAXIMUM_ROUNDS:
+            raise InputError("is not a number of rounds", code="bad-number", field="/calibration/rounds")
     flip = convention.take("flip", False)
     if not isinstance(flip, bool):
         raise InputError("is neither true nor false", code="bad-document", field="/convention/flip")
@@ -155,7 +158,7 @@ def tally_from(document: object, pointer: str = "/counts") -> Tally:
         cell = (fields.take("t", 1), *(fields.take(name) for name in "xyab"))
         n = fields.take("n")
         fields.done()
-        if any(isinstance(bit, bool) or bit not in (0, 1) for bit in cell):
+        if any(type(bit) is not int or bit not in (0, 1) for bit in cell):
             raise InputError(f"{cell} is not a cell: t, x, y, a, b are 0 or 1", code="bad-tally", field=f"{pointer}/{place}")
         if counts[cell_index(*cell)]:
             raise InputError("the cell stands twice", code="bad-tally", field=f"{pointer}/{place}")

@@ -22,6 +22,8 @@ CELLS = 32
 SETTING_PAIRS = ((0, 0), (0, 1), (1, 0), (1, 1))
 PLANES = ("t", "x", "y", "a", "b")
 MAXIMUM_ROUNDS = 2**50          # counts stay exact in JSON numbers and in float64
+LEAST_ORDER = 1 + 1e-10         # what the largest run could use is above it
+MOST_CREDIT = 1e9               # bits per round
 METHODS = ("factor-closed", "eat-2018", "eat-2019")
 
 
@@ -43,7 +45,7 @@ def _number(value: object, field: str, low: float, high: float, *, low_open: boo
         raise InputError("is not a finite number of ordinary size", code="bad-number", field=field)
     if value < low or value > high or (low_open and value == low) or (high_open and value == high):
         left, right = "(" if low_open else "[", ")" if high_open else "]"
-        raise InputError(f"{value!r} is outside {left}{low:g}, {high:.7g}{right}", code="out-of-range", field=field)
+        raise InputError(f"{value!r} is outside {left}{low:.12g}, {high:.7g}{right}", code="out-of-range", field=field)
 
 
 def _whole(value: object, field: str, low: int, high: int) -> None:
@@ -225,11 +227,11 @@ class ScoreTable:
     generation: tuple[float, float, float, float]
 
     def __post_init__(self) -> None:
-        _number(self.order, "/order", 1.0, 2.0, low_open=True)
+        _number(self.order, "/order", LEAST_ORDER, 2.0)
         if len(self.test) != 16 or len(self.generation) != 4:
             raise InputError("a table has 16 test and 4 generation credits", code="bad-table", field="/table")
         for credit in self.test + self.generation:
-            _number(credit, "/table", -1e9, 1e9)
+            _number(credit, "/table", -MOST_CREDIT, MOST_CREDIT)
 
 
 @dataclass(frozen=True)
@@ -303,7 +305,7 @@ class Declaration:
         else:
             if self.order is None:
                 raise InputError(f"{self.method} needs an order between 1 and 2", code="bad-declaration", field="/order")
-            _number(self.order, "/order", 1.0, 2.0, low_open=True, high_open=self.method == "eat-2019")
+            _number(self.order, "/order", LEAST_ORDER, 2.0, high_open=self.method == "eat-2019")
         if self.table is not None and self.table.order != self.order:
             raise InputError("the table was made for another order", code="bad-declaration", field="/table")
 

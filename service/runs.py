@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import secrets
+from collections.abc import Sequence
 from typing import Any
 
 from extractor.documents import declaration_from
@@ -21,6 +22,21 @@ PARTS_OF_A_RUN = ("segments", "seal", "seed", "events", "certificate", "report",
 def new_id(letter: str) -> str:
     """A fresh object id: a letter for the kind and 64 random bits."""
     return letter + secrets.token_hex(8)
+
+
+def rounds_used_before(reading: Reading, row: RunRow, planes_digests: Sequence[str]) -> str | None:
+    """A sentence if rounds with one of these digests are in another sealed run, else None.
+
+    Two hashes of the same rounds together hold more bits than any certificate covers, and rounds that were sealed before
+    are older than a declaration made since. A run that failed may be repeated under its own declaration.
+    """
+    for other in reading.runs_with_rounds(planes_digests, other_than=row.id):
+        if other.state == "failed" and other.declaration_id == row.declaration_id:
+            continue
+        where = f"run {other.id}" if other.owner == row.owner else "another run"
+        return (f"rounds of this run were sealed before, in {where}; the same rounds are never certified twice, because two "
+                "outputs together would hold more bits than the rounds")
+    return None
 
 
 def prepare_run(parts: Parts, run_id: str) -> None:

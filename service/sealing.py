@@ -9,8 +9,10 @@ from service.clock import now_text
 from service.errors import Conflict
 from service.jobs import states
 from service.parts import Parts
+from service.runs import rounds_used_before
 from service.store.contracts import RunRow, SegmentRow
 
+TELLING_ROUNDS = 64     # shorter segments may be equal by chance
 NAMED = 50              # places listed one by one in an error
 
 
@@ -18,7 +20,7 @@ def seal(parts: Parts, run_id: str, segments: int, rounds: int) -> RunRow:
     """Seals the run if exactly these numbers arrived, and says so in the ledger; the same call again changes nothing.
 
     Errors raised: Conflict "segments-missing", "segments-differ", "rounds-differ", "missing-round", "repeated-round",
-    "seal-differs" (sealed before with other numbers).
+    "rounds-used-before", "seal-differs" (sealed before with other numbers).
     """
     with parts.store.write() as transaction:
         row = transaction.get_run(run_id)
@@ -29,6 +31,9 @@ def seal(parts: Parts, run_id: str, segments: int, rounds: int) -> RunRow:
             return row
         received = transaction.list_segments(run_id)
         _check(received, segments, rounds)
+        used = rounds_used_before(transaction, row, [one.planes_digest for one in received if one.rounds >= TELLING_ROUNDS])
+        if used:
+            raise Conflict(used, code="rounds-used-before")
         now = parts.ledger.time(transaction, now_text())
         declaration = transaction.get_declaration(row.declaration_id)
         states.move(transaction, row, "sealed", {"sealed_segments": segments, "sealed_rounds": rounds,

@@ -13,7 +13,6 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import hashlib
-import os
 from collections.abc import AsyncIterator, Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
@@ -34,7 +33,7 @@ from service.parts import Parts
 from service.runs import declaration_of
 from service.store.blobs import SEED, segment_name
 from service.store.contracts import RunRow, SegmentRow
-from service.store.durable import storage_errors, sync_folder, temporary_path
+from service.store.durable import rename_durably, temporary_path
 
 WRITE_BYTES = 2**20             # pieces are gathered to this size before a thread takes them to disk
 ROOM_CHECK_BYTES = 2**26        # how often a growing body is held against the free room
@@ -210,7 +209,7 @@ def _record(parts: Parts, made: SegmentRow, declared: int, packed: Path, final: 
         if before + made.rounds > declared:
             raise _too_many(declared, before, made.rounds)
         # The name before the row: a row never promises a file that is not there; a file without a row counts nothing.
-        _rename(packed, final)
+        rename_durably(packed, final)
         transaction.insert_segment(made)
     return made, True
 
@@ -224,12 +223,6 @@ def refuse_if_sealed(row: RunRow | None) -> None:
 def segment_differs(number: int) -> Conflict:
     return Conflict(f"segment {number} was received with another digest and cannot be replaced; use the next number, "
                     "or open a new run", code="segment-differs")
-
-
-def _rename(source: Path, final: Path) -> None:
-    with storage_errors(final):
-        os.rename(source, final)
-    sync_folder(final.parent)
 
 
 def seed_length(parts: Parts, row: RunRow) -> int:
@@ -270,7 +263,7 @@ def take_seed(parts: Parts, run_id: str, bits: int, body: RawBody) -> RunRow:
             if row is None or row.state != "working" or row.stage != "seed" or row.waiting_for != "seed":
                 raise Conflict("the run does not wait for its seed just now; look at it again", code="run-busy",
                                retry_after_s=1.0)
-            _rename(sealed, final)
+            rename_durably(sealed, final)
             states.record_seed(transaction, parts.ledger, row, "upload", digest)
             return transaction.get_run(run_id) or row
     finally:

@@ -12,7 +12,9 @@ from decimal import Decimal
 from extractor.errors import InputError
 from extractor.entropy import accumulation, lengths, statements, validity
 from extractor.entropy.numerics import ZERO, down, exactly, floor_bits, number, up
-from extractor.model import SETTING_PAIRS, CellCredit, Certificate, Declaration, Tally, Term, cells
+from extractor.model import MAXIMUM_ROUNDS, SETTING_PAIRS, CellCredit, Certificate, Declaration, Tally, Term, cells
+
+MOST_LOG2_FACTOR = 900     # factors of a table stay below 2^900: their sums still fit a float
 
 _FACTOR = ("estimation factors: Knill, Zhang, Fu 2018 (arXiv:1806.04553); Zhang, Fu, Knill, Phys. Rev. Research 2, 013016 (2020); "
            "one-round bound: Hahn, Philip, Tan, Brown 2025 (arXiv:2507.07365)")
@@ -33,11 +35,20 @@ class _Account:
 
 
 def check_declaration(declaration: Declaration) -> None:
-    """Raise InputError unless the declared method covers the declared settings, table and output rule."""
+    """Raise InputError unless the declared method covers the declared settings, table and output rule.
+
+    The limits keep every intermediate number inside what `numerics` promises, and every certificate inside what JSON can carry.
+    """
+    if declaration.settings.test_probability * declaration.rounds < 1:
+        raise InputError(f"with a test probability of {declaration.settings.test_probability!r} not even one of {declaration.rounds} rounds "
+                         "is expected to be a test", code="no-tests", field="/settings/test_probability")
     with exactly():
         if declaration.method == "factor-closed":
             validity.allowed_distributions(declaration.settings)
             validity.win_lose_factors(declaration.table, declaration.convention)
+            if max(declaration.table.test + declaration.table.generation) * (declaration.order - 1) > MOST_LOG2_FACTOR:
+                raise InputError(f"a credit times (order - 1) exceeds {MOST_LOG2_FACTOR}; no valid table has such a cell", code="bad-table",
+                                 field="/table")
             return
         if not declaration.settings.uniform:
             raise InputError(f"{declaration.method} covers uniform test settings without bias only; use factor-closed",
@@ -48,6 +59,9 @@ def check_declaration(declaration: Declaration) -> None:
         counted = "wins" if declaration.method == "eat-2018" else "losses"
         if declaration.acceptance.count != counted:
             raise InputError(f"{declaration.method} accepts on the number of {counted}", code="bad-acceptance", field="/acceptance/count")
+        if declaration.acceptance.limit > declaration.rounds:
+            raise InputError(f"{declaration.acceptance.limit} {counted} cannot come from {declaration.rounds} rounds", code="bad-acceptance",
+                             field="/acceptance/limit")
 
 
 def certify(declaration: Declaration, tally: Tally) -> Certificate:
@@ -61,7 +75,8 @@ def certify(declaration: Declaration, tally: Tally) -> Certificate:
         account = _factor_closed(declaration, tally) if declaration.method == "factor-closed" else _accumulation(declaration, tally)
         classes, why = lengths.class_bits(declaration, tally.rounds)
         terms = account.terms + (("classes", -classes, f"cost of what becomes known besides the bits: {why}", "Hölder inequality over the classes, see lengths.class_bits"),)
-        available = floor_bits(sum((bits for _, bits, _, _ in terms), ZERO))
+        # Nobody gets more than the raw bits that exist, whatever was declared; far below zero the exact number says no more.
+        available = max(min(floor_bits(sum((bits for _, bits, _, _ in terms), ZERO)), 2 * tally.rounds), -MAXIMUM_ROUNDS)
         listed = tuple(Term(name, down(bits), meaning, source) for name, bits, meaning, source in terms)
     wanted = declaration.output_bits
     reason = account.refusal

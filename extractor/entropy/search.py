@@ -17,7 +17,7 @@ from extractor.model import SETTING_PAIRS, Convention, ScoreTable, Settings
 
 TSIRELSON = float(TSIRELSON_SCORE)
 _LOW, _HIGH = 0.75 + 1e-13, TSIRELSON - 1e-13
-ORDER_RANGE = (1e-8, 1.0)     # order - 1
+ORDER_RANGE = (2e-10, 1.0)     # order - 1
 
 
 def best_in_log(gain: Callable[[float], float], low: float, high: float, points: int = 41) -> float:

@@ -18,6 +18,9 @@ _COMMON = (
     "nothing from the boxes while it lasts.",
     "The stations are isolated: during a round neither box learns the other's setting or outcome, and outcomes leave a station only into the record.",
     "The records are honest: every round of the run is in it, in order, and the classical computers that record and process it are trusted.",
+    "No round of this run is part of another run from which bits are taken.",
+    "How the run was split into segments did not depend on its outcomes, and the ledger's salted commitments (HMAC-SHA-256 under secret keys) "
+    "hide what they commit to.",
     "The seed is uniform, independent of the boxes and of the adversary, and unknown to the boxes until the run was sealed.",
 )
 

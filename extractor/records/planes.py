@@ -37,6 +37,31 @@ _PLANE_BYTES = BLOCK_ROUNDS // 8
 _BLOCK_BYTES = len(PLANES) * _PLANE_BYTES
 
 
+def slice_batch(batch: RoundBatch, start: int, rounds: int) -> RoundBatch:
+    """Rounds start .. start + rounds - 1 of a batch."""
+    if start == 0 and rounds == batch.rounds:
+        return batch
+    return RoundBatch(rounds, {name: slice_bits(batch.planes[name], start, rounds) for name in PLANES})
+
+
+def cut(batches: Iterable[RoundBatch], sizes: Sequence[int]) -> Iterator[tuple[int, RoundBatch]]:
+    """The rounds cut into parts of `sizes` rounds: (number of the part, piece of it), whatever batches they came in.
+
+    Rounds beyond the last part belong to part len(sizes).
+    """
+    part, left = 0, sizes[0] if sizes else 0
+    for batch in batches:
+        position = 0
+        while position < batch.rounds:
+            while part < len(sizes) and not left:
+                part += 1
+                left = sizes[part] if part < len(sizes) else 0
+            take = batch.rounds - position if part == len(sizes) else min(left, batch.rounds - position)
+            yield part, slice_batch(batch, position, take)
+            position += take
+            left -= take
+
+
 def rebatch(batches: Iterable[RoundBatch], rounds: int = BLOCK_ROUNDS) -> Iterator[RoundBatch]:
     """The same rounds in batches of exactly `rounds`, the last one shorter. Memory: one batch in, one batch out."""
     block: dict[str, np.ndarray] = {}

@@ -15,7 +15,7 @@ from extractor.seal.report import difference
 
 BEFORE_REPORT = {"certified": ("declaration", "seal", "certificate", "seed"),
                  "refused": ("declaration", "seal", "refusal")}
-AFTER_REPORT = {"certified": ("result", "collection", "erasure"), "refused": ("result", "erasure")}
+AFTER_RESULT = {"certified": ("collection", "erasure"), "refused": ("erasure",)}      # "result" fixes the report itself
 
 
 def included_entries(extract: object, checkpoint: Checkpoint) -> list[tuple[int, Entry]]:
@@ -44,7 +44,8 @@ def included_entries(extract: object, checkpoint: Checkpoint) -> list[tuple[int,
 def check_trail(entries: Sequence[tuple[int, Entry]], report: Mapping[str, Any], outcome: str) -> dict[str, Entry]:
     """The entries by kind, if they are those of this run, complete and in order, and listed so in the report."""
     kinds = [entry.kind for _, entry in entries]
-    needed = list(BEFORE_REPORT[outcome])
+    before = len(BEFORE_REPORT[outcome])
+    needed = [*BEFORE_REPORT[outcome], "result"]
     for kind in needed:
         if kind not in kinds:
             raise ProofError(f"the ledger entry of the {kind} is missing", code="missing-entry")
@@ -59,7 +60,7 @@ def check_trail(entries: Sequence[tuple[int, Entry]], report: Mapping[str, Any],
         raise ProofError(f"the ledger has the steps of this run in the wrong order: {', '.join(kinds)}; it must begin "
                          f"{', '.join(needed)}", code="wrong-order")
     rest = kinds[len(needed):]
-    if rest != [kind for kind in AFTER_REPORT[outcome] if kind in rest]:
+    if rest != [kind for kind in AFTER_RESULT[outcome] if kind in rest]:
         raise ProofError(f"after the {needed[-1]} the ledger entries {', '.join(rest)} cannot belong to this run",
                          code="wrong-order")
     for index, entry in entries[1:]:        # the first one is about the declaration
@@ -70,7 +71,7 @@ def check_trail(entries: Sequence[tuple[int, Entry]], report: Mapping[str, Any],
     proved = [{"index": index, "kind": entry.kind, "time": entry.time, "digest": canonical.bytes_digest(entry.bytes)}
               for index, entry in entries]
     length = len(listed) if isinstance(listed, list) else 0
-    place = difference(listed, proved[:max(length, len(needed))])
+    place = difference(listed, proved[:max(length, before)])
     if place:
         raise ProofError(f"the report's list of ledger entries differs from the proved ones at {place}",
                          code="disagreement")

@@ -18,7 +18,7 @@ from typing import Any, BinaryIO
 from extractor import documents, tally as tallying
 from extractor.errors import InputError, ProofError
 from extractor.model import Certificate, Declaration, RoundBatch, Tally
-from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest
+from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, cut
 from extractor.records.rounds import open_rounds
 from extractor.seal import bundle, canonical, checkpoint, entries, note, trail
 from extractor.seal.fields import check_fields
@@ -239,15 +239,19 @@ def _score(papers: _Papers, log: _Log) -> None:
 
 
 def _rounds(papers: _Papers, found: list[tuple[int, entries.Entry]], files: RoundFiles, log: _Log) -> None:
+    """Tally and digest again, and segment by segment that these are the rounds that were sealed, however they are split here."""
     records, salt = papers.report["records"], bytes.fromhex(papers.report["ledger"]["salt"])
+    listed = records["files"]
+    if listed is not None:
+        sizes = [one["rounds"] for one in listed]
+    else:           # a public report names no segments: one segment is the whole run, else the files must be the segments
+        sizes = [records["rounds"]] if records["segments"] == 1 else None
     with _reading("the rounds"):
-        tally, digest, parts = _count(papers.declaration, files)
-    listed = records["files"] or []
-    if [rounds for rounds, _ in parts] == [one["rounds"] for one in listed]:        # these look like the segments
-        for (_, part), (_, name), one in zip(parts, files, listed):
-            if part != one["planes_digest"]:
-                raise ProofError(f"{name} does not hold the rounds of segment {one['segment']}: its digest is another",
-                                 code="other-rounds")
+        tally, digest, parts = _count(papers.declaration, files, sizes)
+    for part, one in zip(parts, listed or ()):
+        if part != one["planes_digest"]:
+            raise ProofError(f"the files do not hold the rounds of segment {one['segment']}: their digest is another",
+                             code="other-rounds")
     if tally.rounds != records["rounds"]:
         raise ProofError(f"the files have {tally.rounds} rounds, the run has {records['rounds']}", code="other-rounds")
     if digest != records["planes_digest"]:
@@ -256,23 +260,27 @@ def _rounds(papers: _Papers, found: list[tuple[int, entries.Entry]], files: Roun
         raise ProofError("the tally of the certificate is not the tally of the rounds", code="wrong-tally")
     log.right("rounds", f"{tally.rounds} rounds counted again: digest and tally are those of the report.")
     sealed = next(entry.body["records_commitment"] for _, entry in found if entry.kind == "seal")
-    if entries.records_commitment(salt, [part for _, part in parts]) == sealed:
-        log.right("segments", "the files are the segments that were sealed.")
-    else:
-        log.left_open("the files against the seal: they hold the run's rounds, but split otherwise than its segments.")
+    if entries.records_commitment(salt, parts) != sealed:
+        raise ProofError("the files are not shown to be the rounds that were sealed" + (
+            ": the commitment of the seal is another" if sizes else
+            "; the report does not say how the run was split, so give the segments as they were uploaded"), code="other-rounds")
+    log.right("segments", "these are the rounds that were sealed.")
 
 
-def _count(declaration: Declaration, files: RoundFiles) -> tuple[Tally, str, list[tuple[int, str]]]:
-    """Tally and digest of all files, and rounds and digest of each, in one pass."""
-    tally, whole, parts = Tally.empty(), PlaneDigest(), []
-    for file, name in files:
-        part = PlaneDigest()
-        for batch in open_rounds(file, name, declaration.rules).batches():
-            tally += tallying.tally_batch(batch)
-            whole.update(batch)
-            part.update(batch)
-        parts.append((part.rounds, part.hexdigest()))
-    return tally, whole.hexdigest(), parts
+def _count(declaration: Declaration, files: RoundFiles, sizes: list[int] | None) -> tuple[Tally, str, list[str]]:
+    """Tally and digest of all files, and the digests of parts of `sizes` rounds (None: of each file), in one pass."""
+    tally, whole, parts = Tally.empty(), PlaneDigest(), {}
+
+    def pieces() -> Iterator[tuple[int, RoundBatch]]:
+        read = ((number, batch) for number, (file, name) in enumerate(files)
+                for batch in open_rounds(file, name, declaration.rules).batches())
+        return read if sizes is None else cut((batch for _, batch in read), sizes)
+
+    for number, batch in pieces():
+        tally += tallying.tally_batch(batch)
+        whole.update(batch)
+        parts.setdefault(number, PlaneDigest()).update(batch)
+    return tally, whole.hexdigest(), [parts[number].hexdigest() for number in sorted(parts)]
 
 
 def _seed(papers: _Papers, seed: BinaryIO | None, log: _Log) -> None:

@@ -18,8 +18,7 @@ from extractor.documents import certificate_document
 from extractor.errors import InputError, ProofError
 from extractor.hashing.seeds import SeedFile
 from extractor.model import PLANES, Declaration, RoundBatch, Tally
-from extractor.records.bits import slice_bits
-from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, read_planes, rebatch
+from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, read_planes, rebatch, slice_batch
 from extractor.seal import canonical
 from extractor.seal.entries import certificate_commitment
 from extractor.tally import tally_batch
@@ -29,8 +28,11 @@ from service.errors import DamagedFile
 from service.jobs.publishing import certificate_of, publish
 from service.jobs.work import Work
 from service.parts import Parts
+from service.runs import rounds_used_before
+from service.sealing import TELLING_ROUNDS
 from service.store.blobs import PARTIAL, SEED, segment_name
-from service.store.contracts import RunRow, SegmentRow
+from service.store.contracts import RunRow, SegmentRow, Transaction
+from service.store.durable import rename_durably, temporary_path
 
 PIECE_BYTES = 2**20
 Stage = Callable[[Work, RunRow], None]
@@ -64,8 +66,13 @@ def tally(work: Work, row: RunRow) -> None:
     if len(segments) != row.sealed_segments or total.rounds != row.sealed_rounds:
         raise ProofError(f"{len(segments)} segments with {total.rounds} rounds are stored, {row.sealed_segments} with "
                          f"{row.sealed_rounds} were sealed", code="segments-damaged")
+    def fresh(transaction: Transaction) -> None:
+        used = rounds_used_before(transaction, row, [whole.hexdigest()]) if total.rounds >= TELLING_ROUNDS else None
+        if used:        # the seal compared segments; rounds that were split otherwise show only now
+            raise ProofError(used, code="rounds-used-before")
+
     work.advance(row, "certify", {"tally": total.counts, "planes_digest": whole.hexdigest(),
-                                  **_look(declaration, total, segments)})
+                                  **_look(declaration, total, segments)}, check=fresh)
 
 
 def _look(declaration: Declaration, total: Tally, segments: list[SegmentRow]) -> dict[str, object]:
@@ -117,18 +124,22 @@ def draw_seed(work: Work, row: RunRow) -> None:
         work.wait_for_seed(row)
         return
     parts, bits, digest = work.parts, row.seed_bits or 0, hashlib.sha256()
-    size = (bits + 7) // 8
+    size, final = (bits + 7) // 8, work.parts.blobs.path(row.id, SEED)
     parts.blobs.need(size)
-    with VaultWriter(parts.blobs.path(row.id, SEED), parts.keys.load(row.id), SEED) as writer:
-        for start in range(0, size, PIECE_BYTES):
-            piece = bytearray(os.urandom(min(PIECE_BYTES, size - start)))
-            if start + len(piece) == size and bits % 8:
-                piece[-1] &= (1 << bits % 8) - 1
-            digest.update(piece)
-            writer.write(piece)
-            work.progress(row, start, size)
-        writer.commit()
-    work.record_seed(row, f"sha256:{digest.hexdigest()}")
+    drawn = temporary_path(final)
+    try:
+        with VaultWriter(drawn, parts.keys.load(row.id), SEED) as writer:
+            for start in range(0, size, PIECE_BYTES):
+                piece = bytearray(os.urandom(min(PIECE_BYTES, size - start)))
+                if start + len(piece) == size and bits % 8:
+                    piece[-1] &= (1 << bits % 8) - 1
+                digest.update(piece)
+                writer.write(piece)
+                work.progress(row, start, size)
+            writer.commit()
+        work.record_seed(row, f"sha256:{digest.hexdigest()}", lambda: rename_durably(drawn, final))
+    finally:
+        drawn.unlink(missing_ok=True)
 
 
 # ---- hash
@@ -194,10 +205,8 @@ def _from_round(batches: Iterator[RoundBatch], skip: int) -> Iterator[RoundBatch
     for batch in batches:
         drop, skip = min(skip, batch.rounds), 0
         left = batch.rounds - drop
-        if drop and left:
-            yield RoundBatch(left, {name: slice_bits(batch.planes[name], drop, left) for name in PLANES})
-        elif left:
-            yield batch
+        if left:
+            yield slice_batch(batch, drop, left)
 
 
 def _partial_head(row: RunRow, rounds: int) -> bytes:

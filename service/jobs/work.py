@@ -5,7 +5,7 @@ from __future__ import annotations
 import logging
 import threading
 import time
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -90,9 +90,13 @@ class Work:
             self._append(transaction, [entry])
 
     def advance(self, row: RunRow, stage: str, changes: Mapping[str, Any],
-                entries: Sequence[tuple[str, Mapping[str, Any]]] = ()) -> None:
-        """The stage of `row` is done: its results, ledger entries and the next stage in one transaction."""
-        self._commit(row, "working", stage, {**changes, **self.spent(row), "attempts": 0}, entries)
+                entries: Sequence[tuple[str, Mapping[str, Any]]] = (),
+                check: Callable[[Transaction], None] | None = None) -> None:
+        """The stage of `row` is done: its results, ledger entries and the next stage in one transaction.
+
+        check: looks at the transaction first and raises if the results must not stand.
+        """
+        self._commit(row, "working", stage, {**changes, **self.spent(row), "attempts": 0}, entries, check)
 
     def finish(self, row: RunRow, state: str, changes: Mapping[str, Any],
                entries: Sequence[tuple[str, Mapping[str, Any]]] = ()) -> None:
@@ -107,11 +111,15 @@ class Work:
             self._must(moved)
             transaction.release(row.id, self.worker)
 
-    def record_seed(self, row: RunRow, digest: str) -> None:
-        """The drawn seed is durable: ledger entry, and on to hash."""
+    def record_seed(self, row: RunRow, digest: str, install: Callable[[], None]) -> None:
+        """The drawn seed is durable: under its final name (`install`), in the ledger, and on to hash, in one step.
+
+        A worker whose lease was lost while it drew must not touch the seed that another one has recorded since.
+        """
         with self.parts.store.write() as transaction:
             self._must(states.record_seed(transaction, self.parts.ledger, row, "system", digest,
                                           changes=self.spent(row), holder=self.worker))
+            install()
 
     def spent(self, row: RunRow) -> dict[str, Any]:
         """The stage's seconds added to what earlier attempts at it took."""
@@ -119,8 +127,11 @@ class Work:
         return {"stage_seconds": {**row.stage_seconds, row.stage: round(before + time.monotonic() - self._began, 3)}}
 
     def _commit(self, row: RunRow, state: str, stage: str | None, changes: Mapping[str, Any],
-                entries: Sequence[tuple[str, Mapping[str, Any]]]) -> None:
+                entries: Sequence[tuple[str, Mapping[str, Any]]],
+                check: Callable[[Transaction], None] | None = None) -> None:
         with self.parts.store.write() as transaction:
+            if check is not None:
+                check(transaction)
             self._must(states.move(transaction, row, state, changes, stage=stage, holder=self.worker))
             self._append(transaction, entries)
             if state != "working":

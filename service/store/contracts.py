@@ -203,6 +203,9 @@ class Reading(Protocol):
     def segment_totals(self, run_ids: Iterable[str]) -> dict[str, SegmentTotals]:
         """Segments and rounds received, for every run asked about (zeros included)."""
 
+    def runs_with_rounds(self, planes_digests: Sequence[str], *, other_than: str) -> list[RunRow]:
+        """Other runs, sealed or later, that hold a segment with one of these digests or have it as digest of the whole run."""
+
     def events_after(self, run_id: str, seq: int = 0, *, limit: int = 500) -> list[EventRow]:
         """Events with a number above `seq`, ascending."""
     def last_event(self, run_id: str) -> EventRow | None: ...

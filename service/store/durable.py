@@ -99,6 +99,13 @@ def _write_temporary(path: Path, data: bytes, mode: int) -> Path:
     return temporary
 
 
+def rename_durably(source: Path, final: Path) -> None:
+    """A complete, synced file takes its final name, whatever had it before. Errors raised: as `storage_errors`."""
+    with storage_errors(final):
+        os.rename(source, final)
+    sync_folder(final.parent)
+
+
 def write_durably(path: Path, data: bytes, mode: int = 0o600) -> None:
     """Creates or replaces the file; after the return it survives a power loss, before it the old one does."""
     temporary = _write_temporary(path, data, mode)

@@ -148,6 +148,8 @@ ledger_head = Table(
     UniqueConstraint("size"),
 )
 
+Index("runs_by_rounds", runs.c.planes_digest)
+Index("segments_by_rounds", segments.c.planes_digest)
 Index("runs_waiting", runs.c.state, runs.c.sealed_time, runs.c.number)
 
 _TUPLES = {"scopes", "tally", "no_clicks"}      # JSON lists that rows hold as tuples

@@ -90,6 +90,16 @@ class SqlReading:
                 totals[run_id] = SegmentTotals(int(count), int(rounds))
         return totals
 
+    def runs_with_rounds(self, planes_digests: Sequence[str], *, other_than: str) -> list[RunRow]:
+        found: dict[str, RunRow] = {}
+        for at in range(0, len(planes_digests), _CHUNK):
+            some = planes_digests[at:at + _CHUNK]
+            holding = select(t.segments.c.run_id).where(t.segments.c.planes_digest.in_(some))
+            query = select(t.runs).where(t.runs.c.id != other_than, t.runs.c.state != "open",
+                                         or_(t.runs.c.id.in_(holding), t.runs.c.planes_digest.in_(some)))
+            found |= {row.id: row for row in self._many(RunRow, query)}
+        return list(found.values())
+
     def events_after(self, run_id: str, seq: int = 0, *, limit: int = 500) -> list[EventRow]:
         return self._many(EventRow, select(t.events).where(
             t.events.c.run_id == run_id, t.events.c.seq > seq).order_by(t.events.c.seq).limit(limit))

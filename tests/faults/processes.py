@@ -74,12 +74,6 @@ def command(env: dict[str, str], *words: str, check: bool = True) -> subprocess.
     return subprocess.run([sys.executable, "-m", "service.cli", *words], env=env, cwd=ROOT, check=check, capture_output=True, text=True)
 
 
-def work_once(env: dict[str, str], place: str | None = None) -> int:
-    """A worker process until nothing waits, killing itself at `place` if given; its exit code."""
-    words = ["-m", "tests.faults.dying_worker", place or "nowhere:never"]
-    return subprocess.run([sys.executable, *words], env=env, cwd=ROOT, capture_output=True).returncode
-
-
 def round_files(folder: Path, sizes: tuple[int, ...], seed: int = 5) -> list[Path]:
     """Rounds of an honest rig in files of these sizes."""
     folder.mkdir(parents=True, exist_ok=True)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 import os
 import signal
 import time
@@ -10,12 +9,17 @@ from pathlib import Path
 
 import pytest
 
+from extractor import documents, pipeline
+from extractor.hashing.seeds import SeedBytes
+from extractor.seal import canonical
 from extractor.seal.verify import verify_bundle
 from tests.faults import processes
+from tests.service.jobs import killed_worker
 
 SIZES = (600_003, 377_777, 700_000)          # segments do not end at blocks or bytes
 BITS = 20_011
-PLACES = [f"{stage}:{moment}" for stage in ("tally", "certify", "seed", "hash", "publish") for moment in ("enter", "commit", "done")] + ["hash:partial"]
+POINTS = [f"{moment}:{stage}" for stage in ("tally", "certify", "seed", "hash", "publish") for moment in ("enter", "before-commit", "after-commit")]
+POINTS.append("partial")        # after the first stored partial hash
 
 
 @pytest.fixture(scope="module")
@@ -24,22 +28,21 @@ def service(tmp_path_factory):
     with processes.ServerProcess(folder / "data", "--port", "0", "--no-worker") as server:
         server.folder = folder
         server.caller = server.client(server.token())
-        server.files = processes.round_files(folder, SIZES)
         server.declared = server.caller.declare(processes.declaration(sum(SIZES), BITS))["id"]
         server.system_declared = server.caller.declare(processes.declaration(sum(SIZES), BITS, seed_source="system"))["id"]
         yield server
 
 
-def sealed_run(service, declaration: str) -> str:
+def sealed_run(service, declaration: str, files: list[Path]) -> str:
     run = service.caller.open_run(declaration)["id"]
-    for k, path in enumerate(service.files, 1):
+    for k, path in enumerate(files, 1):
         service.caller.put_segment(run, k, path)
-    service.caller.seal(run, len(service.files), sum(SIZES))
+    service.caller.seal(run, len(files), sum(SIZES))
     return run
 
 
-def take_through(service, run: str, place: str | None = None) -> int:
-    """Works the run to its end, with one worker that dies at `place` first; how often a worker died."""
+def take_through(service, run: str, point: str = "none") -> int:
+    """Works the run to its end, with one worker that dies at `point` first; how often a worker died."""
     deaths = 0
     for _ in range(12):
         state = service.caller.run(run)
@@ -49,7 +52,7 @@ def take_through(service, run: str, place: str | None = None) -> int:
             path = service.folder / "seed.bin"
             path.write_bytes(processes.seed_bytes(state["seed"]["bits_needed"]))
             service.caller.put_seed(run, path)
-        code = processes.work_once(service.env, place if not deaths else None)
+        code = killed_worker.run(service.data, "none" if deaths else point)
         if code == -signal.SIGKILL:
             deaths += 1
         else:
@@ -57,47 +60,53 @@ def take_through(service, run: str, place: str | None = None) -> int:
     raise AssertionError(f"the run did not end: {service.caller.run(run)}")
 
 
-def outcome(service, run: str, folder: Path) -> tuple[bytes, bytes]:
-    """Certificate and bits, after the bundle was verified with rounds, seed and bits."""
+def outcome(service, run: str, files: list[Path], folder: Path) -> tuple[bytes, bytes, bytes]:
+    """Certificate, bits and seed, after the bundle was verified with rounds, seed and bits."""
     state = service.caller.run(run)
     assert state["state"] == "certified", state
-    folder.mkdir()
     service.caller.bundle(run, folder / "bundle.zip")
     service.caller.get_seed(run, folder / "seed.bin")
     _, salt = service.caller.get_bits(run, folder / "bits.bin")
-    files = [(path.open("rb"), path.name) for path in service.files]
+    opened = [(path.open("rb"), path.name) for path in files]
     with (folder / "seed.bin").open("rb") as seed:
-        verdict = verify_bundle((folder / "bundle.zip").read_bytes(), rounds=files, seed=seed, bits=(folder / "bits.bin").read_bytes(),
+        verdict = verify_bundle((folder / "bundle.zip").read_bytes(), rounds=opened, seed=seed, bits=(folder / "bits.bin").read_bytes(),
                                 bits_salt=bytes.fromhex(salt), trusted_key=service.caller.ledger_key(), say=lambda sentence: None)
-    for file, _ in files:
+    for file, _ in opened:
         file.close()
     assert verdict.ok and verdict.certified_length == BITS
-    return service.caller.certificate(run), (folder / "bits.bin").read_bytes()
+    return service.caller.certificate(run), (folder / "bits.bin").read_bytes(), (folder / "seed.bin").read_bytes()
 
 
-@pytest.fixture(scope="module")
-def undisturbed(service):
-    run = sealed_run(service, service.declared)
-    assert take_through(service, run) == 0
-    return outcome(service, run, service.folder / "undisturbed")
+def undisturbed(document: dict, files: list[Path], seed: bytes) -> tuple[bytes, bytes]:
+    """Certificate and bits of the same rounds and seed from the extractor alone, in this process, which nobody kills."""
+    declaration = documents.declaration_from(document)
+    opened = [(path.open("rb"), path.name) for path in files]
+    batches = list(pipeline.batches_of(opened, declaration.rules))
+    for file, _ in opened:
+        file.close()
+    certificate = pipeline.certify(declaration, pipeline.read_run(batches)[0])
+    bits = pipeline.extract(declaration, certificate, lambda first: batches[first // 2**20:], SeedBytes(seed, certificate.seed_bits))
+    return canonical.canonical_bytes(documents.certificate_document(certificate)), bits
 
 
-@pytest.mark.parametrize("place", PLACES)
-def test_killed_at_every_stage(service, undisturbed, place, tmp_path):
-    """Killed once at this place, the run ends with the certificate and the bits of the undisturbed run."""
-    run = sealed_run(service, service.declared)
-    assert take_through(service, run, place) == 1
-    certificate, bits = outcome(service, run, tmp_path / "out")
-    assert certificate == undisturbed[0]
-    assert hashlib.sha256(bits).digest() == hashlib.sha256(undisturbed[1]).digest()
+@pytest.mark.parametrize("point", POINTS)
+def test_killed_at_every_stage(service, point, tmp_path):
+    """Killed once at this point, the run ends with the certificate and the bits of an undisturbed computation."""
+    files = processes.round_files(tmp_path, SIZES, seed=POINTS.index(point))
+    run = sealed_run(service, service.declared, files)
+    assert take_through(service, run, point) == 1
+    certificate, bits, seed = outcome(service, run, files, tmp_path)
+    assert (certificate, bits) == undisturbed(processes.declaration(sum(SIZES), BITS), files, seed)
 
 
-@pytest.mark.parametrize("place", ["seed:commit", "seed:done", "hash:partial", "hash:commit"])
-def test_killed_with_a_drawn_seed(service, place, tmp_path):
+@pytest.mark.parametrize("point", ["before-commit:seed", "after-commit:seed", "partial", "before-commit:hash"])
+def test_killed_with_a_drawn_seed(service, point, tmp_path):
     """With a seed drawn by the service: one seed in the ledger, and bits that follow from it, whenever the worker dies."""
-    run = sealed_run(service, service.system_declared)
-    assert take_through(service, run, place) == 1
-    outcome(service, run, tmp_path / "out")
+    files = processes.round_files(tmp_path, SIZES, seed=100 + POINTS.index(point))
+    run = sealed_run(service, service.system_declared, files)
+    assert take_through(service, run, point) == 1
+    certificate, bits, seed = outcome(service, run, files, tmp_path)
+    assert (certificate, bits) == undisturbed(processes.declaration(sum(SIZES), BITS, seed_source="system"), files, seed)
 
 
 def test_a_killed_worker_is_replaced_by_its_service(tmp_path):

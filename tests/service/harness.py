@@ -6,6 +6,7 @@ import base64
 import functools
 import hashlib
 import io
+import itertools
 import threading
 import time
 from collections.abc import Sequence
@@ -68,6 +69,14 @@ def npz(count: int = ROUNDS, seed: int = 7, visibility: float = 1.0) -> bytes:
     return _written(write_npz, rounds(count, seed, visibility))
 
 
+_LABELS = itertools.count(1000)
+
+
+def fresh_npz(count: int = ROUNDS) -> bytes:
+    """A round file with rounds of its own: the service takes no rounds twice."""
+    return _written(write_npz, simulate(Rig(), count, next(_LABELS)))
+
+
 @functools.cache
 def split_npz(sizes: int, count: int = ROUNDS, seed: int = 7) -> tuple[bytes, ...]:
     """The same rounds in several files of `sizes` rounds."""
@@ -124,14 +133,14 @@ class Caller:
         return answer.json()["id"]
 
     def sealed_run(self, body: dict[str, Any] | None = None, files: Sequence[bytes] | None = None) -> str:
-        """A run with all its rounds, sealed."""
+        """A run with all its rounds, sealed; without `files`, rounds that no other run of this process has."""
         run = self.open_run(body)
-        total = 0
-        for number, data in enumerate(files or [npz()], 1):
+        total, files = 0, files or [fresh_npz()]
+        for number, data in enumerate(files, 1):
             answer = self.put(f"/v1/runs/{run}/segments/{number}", data)
             assert answer.status_code == 201, answer.text
             total += answer.json()["rounds"]
-        answer = self.post(f"/v1/runs/{run}/seal", {"segments": len(files or [0]), "rounds": total})
+        answer = self.post(f"/v1/runs/{run}/seal", {"segments": len(files), "rounds": total})
         assert answer.status_code == 202, answer.text
         return run
 

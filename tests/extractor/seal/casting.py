@@ -11,6 +11,7 @@ import io
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import cache
+from itertools import takewhile
 from typing import Any
 
 from extractor import pipeline
@@ -61,7 +62,7 @@ class Run:
     diagnostics: list[dict[str, Any]]
     seed: bytes | None
     bits: bytes | None
-    after: tuple[str, ...] = ()                     # kinds of entries that came after the report
+    after: tuple[str, ...] = ("result",)            # kinds of entries that came after the report
 
     def files(self) -> list[tuple[io.BytesIO, str]]:
         return [(io.BytesIO(data), name) for name, data in self.segments]
@@ -109,7 +110,7 @@ class Run:
                 log.append(b"another run's entry %d %d" % (len(placed), k))
             placed.append((log.append(entry.bytes), entry))
 
-        early = [entry for entry in trail if entry.kind not in self.after]
+        early = list(takewhile(lambda entry: entry.kind not in self.after, trail))
         for entry in early:
             place(entry)
         document = report.build_report(
@@ -149,7 +150,7 @@ def uniform(bits: int, label: bytes) -> bytes:
 
 
 def run(declaration: Declaration, split: tuple[int, ...], visibility: float = 1.0, seed: int = 1,
-        after: tuple[str, ...] = ()) -> Run:
+        after: tuple[str, ...] = ("result",)) -> Run:
     """Simulate rounds in segments of the sizes in `split` (NPZ and CSV in turn), certify, extract."""
     rig = optimal_rig(visibility=visibility) if visibility < 1 else optimal_rig()
     whole, = rebatch(simulate(rig, sum(split), seed))

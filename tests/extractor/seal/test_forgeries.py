@@ -5,6 +5,7 @@ Each must be refused with a sentence that says what is wrong.
 
 from __future__ import annotations
 
+import io
 from dataclasses import replace
 
 import pytest
@@ -12,16 +13,17 @@ import pytest
 from extractor import documents, pipeline
 from extractor.errors import ProofError
 from extractor.model import Tally, cell_index
+from extractor.records.writers import write_npz
 from extractor.seal import bundle, canonical, entries
 from tests.extractor.seal import casting
-from tests.extractor.seal.judging import REMOVED, fails, put, quiet
+from tests.extractor.seal.judging import REMOVED, everything, fails, put, quiet
 
 # ---- the ledger
 
 @pytest.mark.parametrize("missing", range(4))
 def test_a_removed_entry_is_noticed(missing) -> None:
     """Declaration, seal, certificate and seed must all be there."""
-    run = replace(casting.certified(), after=())
+    run = replace(casting.certified(), after=("result",))
     kinds = ["declaration", "seal", "certificate", "seed"]
     trail = [entry for entry in run.entries() if entry.kind != kinds[missing]]
     fails(f"entry of the {kinds[missing]} is missing", run.bundle(trail=trail))
@@ -30,7 +32,7 @@ def test_a_removed_entry_is_noticed(missing) -> None:
 @pytest.mark.parametrize("order", [(1, 0, 2, 3), (0, 2, 1, 3), (0, 1, 3, 2), (0, 3, 1, 2)])
 def test_steps_in_another_order_are_refused(order) -> None:
     """A seal before the declaration, a seed before the seal or the certificate: the ledger itself shows it."""
-    run = replace(casting.certified(), after=())
+    run = replace(casting.certified(), after=("result",))
     honest = run.entries()
     trail = [replace(honest[k], time=honest[0].time, subject=honest[0].subject if place == 0 else run.name)
              for place, k in enumerate(order)]
@@ -39,7 +41,7 @@ def test_steps_in_another_order_are_refused(order) -> None:
 
 def test_a_list_that_hides_the_order_is_refused() -> None:
     """Listing late entries first does not help: their indices tell."""
-    run = replace(casting.certified(), after=())
+    run = replace(casting.certified(), after=("result",))
     files = run.contents()
     extract = canonical.parse(files["ledger.json"])
     extract["entries"][1], extract["entries"][3] = extract["entries"][3], extract["entries"][1]
@@ -49,7 +51,7 @@ def test_a_list_that_hides_the_order_is_refused() -> None:
 
 def test_times_that_run_backwards_are_refused() -> None:
     """A declaration dated after the seal is refused although the entries stand in order."""
-    run = replace(casting.certified(), after=())
+    run = replace(casting.certified(), after=("result",))
     trail = run.entries()
     late = replace(trail[0], time="2031-05-04T10:00:00Z")
     fails("the seal .* is dated .* before the declaration", run.bundle(trail=[late, *trail[1:]]))
@@ -59,7 +61,7 @@ def test_times_that_run_backwards_are_refused() -> None:
 
 def test_entries_about_another_run_are_refused() -> None:
     """A seal of another run does not seal this one."""
-    run = replace(casting.certified(), after=())
+    run = replace(casting.certified(), after=("result",))
     trail = run.entries()
     trail[1] = replace(trail[1], subject="run-40")
     fails("is about run-40, not about this run", run.bundle(trail=trail))
@@ -76,7 +78,7 @@ def test_entries_about_another_run_are_refused() -> None:
 ])
 def test_entries_that_say_something_else_are_refused(kind, field, value) -> None:
     """Every field of every entry is held against the report."""
-    run = replace(casting.certified(), after=("collection",))
+    run = replace(casting.certified(), after=("result", "collection"))
     trail = [replace(entry, body={**entry.body, field: value}) if entry.kind == kind else entry
              for entry in run.entries()]
     fails(f"the {kind} in the ledger disagrees with the report: its {field}", run.bundle(trail=trail))
@@ -84,11 +86,11 @@ def test_entries_that_say_something_else_are_refused(kind, field, value) -> None
 
 def test_late_entries_are_those_that_can_follow() -> None:
     """After the report come its own digest, the collection and the erasure, each once; a second seal cannot."""
-    run = replace(casting.certified(), after=("collection",))
+    run = replace(casting.certified(), after=("result", "collection"))
     trail = run.entries()
     for late in (trail[1], trail[4]):
         fails("cannot belong to this run", run.bundle(trail=[*trail, replace(late, time=trail[4].time)]))
-    refused = replace(casting.refused(), after=("collection",))
+    refused = replace(casting.refused(), after=("result", "collection"))
     fails("cannot belong to this run", refused.bundle(trail=[
         *casting.refused().entries()[:3], replace(trail[4], subject=refused.name)]))
 
@@ -153,7 +155,7 @@ def test_every_changed_proof_index_and_entry_is_refused() -> None:
 def test_a_changed_field_of_a_signed_report_is_refused(pointer, value) -> None:
     """Whatever field its signer changed: the report contradicts the rest of the bundle or its own form."""
     if pointer == "/output/bits_commitment" and str(value).startswith("hmac"):
-        run = replace(casting.certified(), after=("collection",))   # before the collection only the bits could tell
+        run = replace(casting.certified(), after=("result", "collection"))   # before the collection only the bits could tell
         fails("collection in the ledger disagrees", run.bundle(change=put(pointer, value)))
         return
     with pytest.raises(ProofError) as caught:
@@ -182,7 +184,7 @@ def test_a_refusal_turned_into_a_certificate_is_refused() -> None:
     """A run that earned too little stays refused whatever is signed."""
     run = casting.refused()
     forged = replace(run.certificate, outcome="certified", reason=None, certified_length=777)
-    fails("recomputed: refused, 0 bits", replace(run.refit(forged), after=()).bundle())
+    fails("recomputed: refused, 0 bits", replace(run.refit(forged), after=("result",)).bundle())
 
 
 def test_a_false_tally_passes_only_until_the_rounds_are_given() -> None:
@@ -202,7 +204,7 @@ def test_a_false_tally_passes_only_until_the_rounds_are_given() -> None:
 
 def test_a_declaration_changed_afterwards_is_refused() -> None:
     """A declaration fitted to the data has another digest than the one in the ledger."""
-    run = replace(casting.certified(), after=())
+    run = replace(casting.certified(), after=("result",))
     later = replace(run.declaration, output_bits=run.certificate.available_bits)
     forged = replace(run, declaration=later).refit(pipeline.certify(later, run.certificate.tally))
     assert quiet(forged.bundle()).certified_length > 777     # had it been declared in time
@@ -238,3 +240,24 @@ def test_signed_nonsense_is_a_proof_error(name) -> None:
             files = run.contents(change=change)
             with pytest.raises(ProofError):
                 quiet(bundle.pack(files))
+
+
+def test_a_bundle_without_the_result_entry_is_refused() -> None:
+    """Only the result entry fixes the report itself; without it a second report of the same run would pass as well."""
+    fails("entry of the result is missing", replace(casting.certified(), after=()).bundle())
+
+
+@pytest.mark.parametrize("disclosure", ["confidential", "public"])
+@pytest.mark.parametrize("joined", [True, False])
+def test_rounds_that_were_not_sealed_are_refused(disclosure, joined) -> None:
+    """A lab that owns the key seals the segments of one run and certifies another one: the seal is held against the rounds handed in."""
+    changes = {} if disclosure == "confidential" else {"disclosure": "public", "output_bits": 400}
+    sealed = casting.run(casting.declared(**changes), (1400, 1600), seed=1)
+    other = casting.run(casting.declared(**changes), (1400, 1600), seed=2)
+    forged = replace(other, records={"segments": sealed.records["segments"], "planes_digest": other.records["planes_digest"]})
+    rounds = other.files()
+    if joined:
+        target = io.BytesIO()
+        write_npz(target, pipeline.batches_of(other.files(), other.declaration.rules))
+        rounds = [(target, "joined.npz")]
+    fails("rounds of segment 1|not shown to be the rounds that were sealed", forged.bundle(), **everything(other) | {"rounds": rounds})

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from extractor import pipeline
-from extractor.errors import InputError
+from extractor.errors import InputError, ProofError
 from extractor.records.writers import write_npy, write_npz
 from extractor.seal import bundle, canonical, note
 from extractor.seal.verify import verify_bundle
@@ -99,11 +99,17 @@ def rewritten(run: casting.Run, **options) -> list:
 
 
 def test_the_same_rounds_in_another_file_are_the_same_rounds() -> None:
-    """Digest and tally do not depend on files and split; the seal's list of segments does, and that is said."""
+    """Digest, tally and even the seal's segments do not depend on how the rounds are split into files."""
     run = casting.certified()
     verdict = quiet(run.bundle(), **everything(run) | {"rounds": rewritten(run, packed=False)})
-    assert "extraction" in [name for name, _ in verdict.checks]
-    assert [sentence for sentence in verdict.unchecked if "split otherwise" in sentence] and len(verdict.unchecked) == 1
+    assert {"extraction", "segments"} <= {name for name, _ in verdict.checks} and verdict.unchecked == ()
+
+
+def test_a_public_report_needs_the_segments_as_they_were() -> None:
+    """A public report does not say how the run was split, so files split otherwise prove nothing and are refused with advice."""
+    run = casting.public()
+    with pytest.raises(ProofError, match="give the segments as they were uploaded"):
+        quiet(run.bundle(), **everything(run) | {"rounds": rewritten(run)})
 
 
 def test_other_rounds_are_refused() -> None:
@@ -116,7 +122,7 @@ def test_other_rounds_are_refused() -> None:
     text = bytearray(run.segments[1][1])
     text[text.index(b"\n") + 1] ^= 1           # the first value of the first row
     altered = [files[0], (io.BytesIO(text), "part-2.csv"), files[2]]
-    fails("part-2.csv does not hold the rounds of segment 2", data, rounds=altered)
+    fails("not hold the rounds of segment 2", data, rounds=altered)
     target = io.BytesIO()
     batch, = pipeline.batches_of(files, run.declaration.rules)
     write_npy(target, [replace(batch, planes=batch.planes | {"a": batch.planes["a"] ^ (np.arange(375) == 7)})])

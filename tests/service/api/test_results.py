@@ -36,7 +36,7 @@ def test_nothing_is_there_before_its_time(service: Service, north: Caller) -> No
         answer = north.get(f"/v1/runs/{made}/{what}")
         problem(answer, 409, codes.get(what, f"{what}-pending"))
     problem(north.post(f"/v1/runs/{made}/collection", {"digest": "sha256:" + "0" * 64}), 409, "not-certified")
-    north.put(f"/v1/runs/{made}/segments/1", npz())
+    north.put(f"/v1/runs/{made}/segments/1", npz(seed=33))
     north.post(f"/v1/runs/{made}/seal", {"segments": 1, "rounds": ROUNDS})
     assert "Retry-After" in north.get(f"/v1/runs/{made}/bits").headers
 
@@ -181,7 +181,7 @@ def test_an_interrupted_erasure_is_finished(service: Service, north: Caller) -> 
 
 def test_many_may_finish_an_erasure(service: Service, north: Caller) -> None:
     """The request that collected and idle workers may erase at the same time: one ledger entry, nothing left."""
-    run = north.sealed_run(files=split_npz(4_000))
+    run = north.sealed_run(files=split_npz(4_000, seed=31))
     service.work()
     with service.parts.store.write() as transaction:
         row = transaction.get_run(run)
@@ -214,7 +214,7 @@ def test_a_refused_run_has_a_report_and_no_bits(service: Service, north: Caller)
 
 def test_the_report_of_a_public_run_lists_no_files(service: Service, north: Caller) -> None:
     """What a public report reveals was paid for; it holds no digests of single segments and still verifies."""
-    run = north.sealed_run(document(disclosure="public", score=0.85), files=split_npz(7_000))
+    run = north.sealed_run(document(disclosure="public", score=0.85), files=split_npz(7_000, seed=32))
     service.work()
     assert north.get(f"/v1/runs/{run}/report").json()["records"]["files"] is None
     assert verify_bundle(north.get(f"/v1/runs/{run}/bundle").content, say=lambda _: None).ok

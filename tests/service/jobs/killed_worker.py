@@ -39,7 +39,7 @@ def arm(point: str) -> None:
             return real(stage)
         stages.enter = enter
     elif kind in ("before-commit", "after-commit"):
-        for name in ("advance", "finish", "record_seed"):
+        for name in ("advance", "finish", "record_seed", "wait_for_seed"):
             _around(name, kind, where)
     elif kind == "partial":
         real_write = stages.write_vault
@@ -64,10 +64,10 @@ def arm(point: str) -> None:
 def _around(name: str, kind: str, where: str) -> None:
     real = getattr(Work, name)
 
-    def wrapped(work: Work, row: Any, *rest: Any) -> None:
+    def wrapped(work: Work, row: Any, *rest: Any, **named: Any) -> None:
         if kind == "before-commit" and row.stage == where:
             die()
-        real(work, row, *rest)
+        real(work, row, *rest, **named)
         if kind == "after-commit" and row.stage == where:
             die()
     setattr(Work, name, wrapped)

@@ -19,13 +19,14 @@ from extractor.seal import canonical
 from extractor.seal.verify import verify_bundle
 from extractor.tally import tally_batches
 from service.custody.vault import read_vault, write_vault
+from service.errors import Conflict
 from service.jobs import stages
 from service.jobs.worker import Worker
 from service.parts import Parts
 from service.store.blobs import PARTIAL, SEED, segment_name
 from tests.service.jobs import killed_worker
 from tests.service.harness import document, npz, opened, rounds, split_npz
-from tests.service.jobs.runs import SealedRuns, bits_of, damage, kinds_of, row_of, steps_of
+from tests.service.jobs.runs import SEEDS, SealedRuns, bits_of, damage, kinds_of, row_of, steps_of
 
 STAGES = [("working", stage) for stage in ("tally", "certify", "seed", "hash", "publish")]
 STEPS = [("open", None), ("sealed", None), *STAGES, ("certified", None)]
@@ -33,9 +34,9 @@ KINDS = ["seal", "certificate", "seed", "result"]
 LARGE = 2**21 + 50_001              # three blocks, so that partial hashes are stored
 
 
-def expected(count: int | None = None, **changed) -> tuple[bytes, int]:
+def expected(batches=None, **changed) -> tuple[bytes, int]:
     """Certificate of the rounds as the extractor alone gives it, and the number of seed bits."""
-    batches = rounds() if count is None else rounds(count)
+    batches = rounds() if batches is None else batches
     certificate = pipeline.certify(declaration_from(document(**changed)), tally_batches(batches))
     return canonical.canonical_bytes(certificate_document(certificate)), certificate.seed_bits
 
@@ -54,11 +55,12 @@ def assert_certified(parts: Parts, run: str) -> None:
     row = row_of(parts, run)
     assert row.state == "certified", row.message
     assert kinds_of(parts, run) == KINDS
-    assert row.certificate == expected()[0]
-    assert bits_of(parts, run) == expected_bits(parts, run)
+    own = rounds(seed=SEEDS[run])
+    assert row.certificate == expected(own)[0]
+    assert bits_of(parts, run) == expected_bits(parts, run, own)
     assert row.lease_holder is None and row.stage is None
     archive = parts.blobs.bundle_path(run).read_bytes()
-    assert verify_bundle(archive, rounds=[(io.BytesIO(npz()), "rounds")], say=lambda _: None).ok
+    assert verify_bundle(archive, rounds=[(io.BytesIO(npz(seed=SEEDS[run])), "rounds")], say=lambda _: None).ok
 
 
 def test_a_run_goes_through_its_stages(parts: Parts, sealed) -> None:
@@ -75,13 +77,29 @@ def test_a_run_goes_through_its_stages(parts: Parts, sealed) -> None:
     assert Worker(parts).run(once=True) == 0
 
 
-def test_a_seed_is_drawn_once_per_run(parts: Parts, sealed) -> None:
-    """Two runs of the same rounds get the same certificate and different seeds and bits."""
-    one, other = sealed(), sealed()
+def test_rounds_are_certified_once(parts: Parts, sealed) -> None:
+    """Rounds of a sealed run are refused at the seal of another one, also a single segment of them; a failed run may be repeated."""
+    first = sealed()
+    again = split_npz(7_000, seed=SEEDS[first])
+    for files in (again, (split_npz(7_000, seed=99)[0], again[1])):
+        with pytest.raises(Conflict, match="sealed before, in run " + first) as caught:
+            sealed(files)
+        assert caught.value.code == "rounds-used-before"
+    with parts.store.write() as transaction:
+        assert transaction.update_run(first, {"state": "failed"}, state="sealed")
+    with pytest.raises(Conflict):      # under another declaration than the failed run's
+        sealed(again)
+
+
+def test_rounds_split_otherwise_are_noticed(parts: Parts, sealed) -> None:
+    """The same rounds in other segments pass the seal, which compares segments, but not the tally: the second run fails."""
+    one = sealed()
+    other = sealed(split_npz(9_000, seed=SEEDS[one]))
     Worker(parts).run(once=True)
-    assert row_of(parts, one).certificate == row_of(parts, other).certificate
-    assert row_of(parts, one).seed_digest != row_of(parts, other).seed_digest
-    assert bits_of(parts, one) != bits_of(parts, other)
+    states = {run: row_of(parts, run) for run in (one, other)}
+    assert sorted(row.state for row in states.values()) == ["certified", "failed"]
+    failed = next(row for row in states.values() if row.state == "failed")
+    assert "rounds-used-before" in failed.message and failed.certificate is None
 
 
 def worker(folder: Path, point: str) -> int:
@@ -134,7 +152,7 @@ def test_a_killed_hash_goes_on_from_its_partial(tmp_path: Path) -> None:
         stages.pipeline.extract = real
     assert started == [2**20]
     assert row_of(parts, run).state == "certified"
-    assert row_of(parts, run).certificate == expected(LARGE, rounds=LARGE)[0]
+    assert row_of(parts, run).certificate == expected(rounds(LARGE), rounds=LARGE)[0]
     assert bits_of(parts, run) == expected_bits(parts, run, rounds(LARGE), rounds=LARGE)
     parts.close()
 
