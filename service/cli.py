@@ -48,6 +48,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except ServiceProblem as problem:
         note(f"bellassay: {problem}")
         for error in problem.errors:
+            if error.get("detail", "") in str(problem):
+                continue  # said already
             place = ", ".join(
                 f"{name} {error[name]}"
                 for name in ("file", "row", "field", "pointer")

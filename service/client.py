@@ -65,9 +65,14 @@ class Client:
 
     def declare(self, document: dict) -> dict:
         """Record a declaration: {"id", "digest", "time", "ledger_index", "declaration"}."""
-        return self._line.json(
+        return self.record(document)[0]
+
+    def record(self, document: dict) -> tuple[dict, bool]:
+        """As `declare`, and whether this call made the record (True) or an earlier one was found (False)."""
+        recorded, status = self._line.json_and_status(
             "POST", "/v1/declarations", json=document, headers={"Idempotency-Key": str(uuid.uuid4())}
         )
+        return recorded, status == 201
 
     def declaration(self, declaration: str) -> dict:
         return self._line.json("GET", f"/v1/declarations/{quote(declaration, safe='')}")

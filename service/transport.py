@@ -52,6 +52,22 @@ class ServiceProblem(Exception):
         self.retry_after_s = retry_after_s
         super().__init__(detail or title)
 
+    def about(self, path: str | Path, sent_as: str) -> ServiceProblem:
+        """The same problem, naming the file the caller knows instead of the name it was sent under.
+
+        A problem that is none of the file's (no answer, a token, another address) stays as it is.
+        """
+        if self.status not in (400, 409, 413, 422):
+            return self
+        mine = ("", None, sent_as)
+        errors = tuple(e | {"file": str(path)} if e.get("file") in mine else e for e in self.errors)
+        text = str(self)
+        if f"file {sent_as}" in text:
+            text = text.replace(f"file {sent_as}", f"file {path}", 1)
+        elif str(path) not in text:
+            text = f"file {path}{', ' if text.startswith(('row ', 'field ')) else ': '}{text}"
+        return ServiceProblem(self.code, self.title, text, errors, self.status, self.retry_after_s)
+
 
 def sha256_of(path: str | Path, progress: Progress | None = None) -> bytes:
     """SHA-256 of a file, read in pieces."""
@@ -142,9 +158,12 @@ class Transport:
             self._session.trust_env = False  # a proxy for the outside world cannot reach this machine's services
 
     def json(self, method: str, path: str, **options: Any) -> dict:
+        return self.json_and_status(method, path, **options)[0]
+
+    def json_and_status(self, method: str, path: str, **options: Any) -> tuple[dict, int]:
         with self.send(method, path, **options) as answer:
             try:
-                return answer.json()
+                return answer.json(), answer.status_code
             except ValueError:
                 raise ServiceProblem(
                     "not-json",

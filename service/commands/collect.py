@@ -20,7 +20,7 @@ from service.commands.common import (
     rows,
     write_file,
 )
-from service.commands.remote import add_service_options, client_of
+from service.commands.remote import add_service_options, client_of, command_line, seed_command
 
 
 def add(commands: Any) -> None:
@@ -47,9 +47,14 @@ def add(commands: Any) -> None:
 def collect(args: argparse.Namespace) -> int:
     client = client_of(args)
     run = client.run(args.run_id)
+    if run["waiting_for"] == "seed":
+        raise InputError(
+            f"the run waits for its seed; there is nothing to collect before it has come: {seed_command(args, run['id'])}",
+            code="waits-for-seed",
+        )
     if run["state"] not in FINAL_STATES:
         raise InputError(
-            f"the run is {run['state']}; there is nothing to collect yet (bellassay watch {run['id']})",
+            f"the run is {run['state']}; there is nothing to collect yet: {command_line(args, 'watch ' + run['id'])}",
             code="not-finished",
         )
     if run["state"] == "failed":

@@ -202,6 +202,22 @@ def grouped(number: int) -> str:
     return f"{number:,}".replace(",", " ")
 
 
+def several(number: int, word: str) -> str:
+    """1 segment, 12 345 segments."""
+    return f"{grouped(number)} {word}{'' if number == 1 else 's'}"
+
+
+def volume(size: float) -> str:
+    """A number of bytes with three digits that count: 18.4 kB, 1.25 GB."""
+    for unit in ("B", "kB", "MB", "GB"):
+        if size < 999.5:
+            break
+        size /= 1000
+    else:
+        unit = "TB"
+    return f"{size:.0f} {unit}" if unit == "B" or size >= 100 else f"{size:.3g} {unit}"
+
+
 def duration(seconds: float) -> str:
     """12.3 s, 4 min 5 s, 3 h 10 min."""
     if seconds < 60:

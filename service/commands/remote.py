@@ -19,9 +19,9 @@ from service.commands.common import (
     bullets,
     duration,
     emit,
-    grouped,
     note,
     rows,
+    several,
 )
 from service.transport import is_this_machine
 
@@ -71,13 +71,26 @@ def add(commands: Any) -> None:
 
 
 def watch(args: argparse.Namespace) -> int:
-    run = follow(client_of(args), args.run_id)
+    run = follow(client_of(args), args.run_id, seed_hint=seed_command(args, args.run_id))
     emit(args, run, run_lines(run))
     return REFUSED if run["state"] in ("refused", "failed") else DONE
 
 
-def follow(client: Client, run_id: str, *, until_seed: bool = False) -> dict:
-    """Show a run until it ends (or asks for its seed); the last Run document."""
+def command_line(args: argparse.Namespace, words: str) -> str:
+    """A further command as the user would type it: with the address, where this call was given another one."""
+    elsewhere = args.url != (os.environ.get("BELLASSAY_URL") or DEFAULT_URL)
+    return f"bellassay {words}" + (f" --url {args.url}" if elsewhere else "")
+
+
+def seed_command(args: argparse.Namespace, run_id: str) -> str:
+    return command_line(args, f"submit --run {run_id} --seed FILE")
+
+
+def follow(client: Client, run_id: str, *, until_seed: bool = False, seed_hint: str = "") -> dict:
+    """Show a run until it ends (or asks for its seed); the Run document as it is then.
+
+    seed_hint  the command that sends a seed, said once if the run waits for one
+    """
     said, said_at, bar, run = None, 0.0, None, None
     try:
         for run in client.watch(run_id):
@@ -87,14 +100,18 @@ def follow(client: Client, run_id: str, *, until_seed: bool = False) -> dict:
             if not bar.show(run) and (place != said or time.monotonic() - said_at >= SPARSE_LINE_S):
                 said, said_at = place, time.monotonic()
                 note(_progress_text(run))
-            if until_seed and run["waiting_for"] == "seed":
-                break
+            if run["waiting_for"] == "seed":
+                if until_seed:
+                    break
+                if seed_hint:
+                    if bar.close():
+                        bar = None
+                    note(f"send the seed with: {seed_hint}")
+                    seed_hint = ""
     finally:
         if bar is not None:
             bar.close()
-    if run is None:
-        return client.run(run_id)
-    return run
+    return client.run(run_id)  # the last event tells how the run was then, not whether it was collected since
 
 
 class _StageBar:
@@ -112,19 +129,25 @@ class _StageBar:
         self._stream.flush()
         return True
 
-    def close(self) -> None:
+    def close(self) -> bool:
+        """Ends the line; whether there was one."""
         if self._stream is not None:
             self._stream.write("\n")
+        return self._stream is not None
 
 
 def _progress_text(run: dict) -> str:
     if run["waiting_for"] == "seed":
         needed = run["seed"]["bits_needed"]
-        return f"waits for its seed ({grouped(needed)} bits)" if needed else "waits for its seed"
+        return f"waits for its seed ({several(needed, 'bit')})" if needed else "waits for its seed"
     if run["state"] != "working":
         return run["state"]
     left = f", about {duration(run['eta_s'])} left" if run["eta_s"] is not None else ""
     return f"{run['stage'] or 'working'} {100 * (run['fraction'] or 0.0):.0f} %{left}"
+
+
+def _received(segments: int, rounds: int) -> str:
+    return f"{several(segments, 'segment')}, {several(rounds, 'round')}"
 
 
 def run_lines(run: dict) -> list[str]:
@@ -134,18 +157,18 @@ def run_lines(run: dict) -> list[str]:
         lines.append(("message", run["message"]))
     if run.get("sealed"):
         sealed = run["sealed"]
-        lines.append(("sealed", f"{sealed['segments']} segments, {grouped(sealed['rounds'])} rounds, {sealed['time']}"))
+        lines.append(("sealed", f"{_received(sealed['segments'], sealed['rounds'])}, {sealed['time']}"))
     else:
-        lines.append(("received", f"{run['segments_received']} segments, {grouped(run['rounds_received'])} rounds"))
+        lines.append(("received", _received(run["segments_received"], run["rounds_received"])))
     score = run.get("score") or {}
     if score.get("winning_probability") is not None:
         lines.append(("winning probability", f"{score['winning_probability']:.7f}"))
     if run.get("available_bits") is not None:
-        lines.append(("available", f"{grouped(run['available_bits'])} bits"))
+        lines.append(("available", several(run["available_bits"], "bit")))
     if run.get("certified_length") is not None:
-        lines.append(("certified length", f"{grouped(run['certified_length'])} bits"))
+        lines.append(("certified length", several(run["certified_length"], "bit")))
     if run.get("waiting_for") == "seed":
-        lines.append(("waits for", f"its seed: bellassay submit --run {run['id']} --seed S.bin"))
+        lines.append(("waits for", f"its seed: bellassay submit --run {run['id']} --seed FILE"))
     if run.get("stage_seconds"):
         lines.append(("stages", ", ".join(f"{stage} {duration(s)}" for stage, s in run["stage_seconds"].items())))
     flagged = [item["sentence"] for item in run.get("diagnostics") or () if item.get("flag")]

@@ -6,6 +6,7 @@ import argparse
 import json
 import logging
 import os
+import shlex
 from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import Any
@@ -150,7 +151,7 @@ def serve(args: argparse.Namespace) -> int:
             print(f"listening on {url}", flush=True)
         workers = f"{settings.workers or 'no'} worker{'' if settings.workers == 1 else 's'}"
         note(f"data in {settings.data.resolve()}, {workers}; stop with Ctrl-C")
-        note(f"a token: bellassay token create NAME --data {settings.data}")
+        note(f"a token: bellassay token create NAME --data {shlex.quote(str(settings.data))}")
 
     return run_service(settings, on_listening=listening)
 
@@ -170,9 +171,15 @@ def work(args: argparse.Namespace) -> int:
 
 
 @contextmanager
-def _store(settings: Any) -> Iterator[Any]:
+def _store(settings: Any, *, make: bool = False) -> Iterator[Any]:
+    """The store of a data folder, made if missing when `make` says so. Errors raised: InputError if there is none."""
     from service.app import open_store
 
+    if not make and not settings.database_path.exists():
+        raise InputError(
+            f"no service data in {settings.data}; start it with: bellassay serve --data {shlex.quote(str(settings.data))}",
+            code="no-service-data",
+        )
     store = open_store(settings)
     try:
         yield store
@@ -189,7 +196,7 @@ def create_token(args: argparse.Namespace) -> int:
     if days <= 0:
         raise InputError("must be above 0", code="out-of-range", field="--days")
     scopes = args.scope or ["submit", "collect", "audit"]
-    with _store(settings) as store, store.write() as transaction:
+    with _store(settings, make=True) as store, store.write() as transaction:
         text, row = new_token(
             transaction,
             owner=args.owner,
@@ -198,7 +205,8 @@ def create_token(args: argparse.Namespace) -> int:
             time=now_text(),
             expires_s=now_s() + days * DAY_S,
         )
-    emit(args, {"token": text} | _token_document(row), [text])
+    emit(args, {"token": text, "data": str(settings.data.resolve())} | _token_document(row), [text])
+    note(f"a token for the service data in {settings.data.resolve()}")
     note(f"owner {row.owner}, scopes {', '.join(row.scopes)}, {days:g} days; it is shown only now")
     note("use it as: export BELLASSAY_TOKEN=TOKEN")
     return DONE

@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pytest
 
-from service.commands.common import Progress, duration, grouped, rows
+from service.commands.common import Progress, duration, grouped, rows, several, volume
 
 
 def test_without_a_terminal_a_line_comes_every_ten_seconds(capsys: pytest.CaptureFixture) -> None:
@@ -44,6 +44,12 @@ def test_on_a_terminal_there_is_a_bar(tmp_path: Path) -> None:
 def test_durations_are_written_as_people_say_them(seconds: float, text: str) -> None:
     """Seconds, minutes or hours, whatever fits."""
     assert duration(seconds) == text
+
+
+def test_numbers_are_written_as_people_say_them() -> None:
+    """One thing is no plural, and sizes have three digits that count."""
+    assert [several(n, "segment") for n in (0, 1, 2000)] == ["0 segments", "1 segment", "2 000 segments"]
+    assert [volume(n) for n in (7, 18_412, 123_456_789, 5e14)] == ["7 B", "18.4 kB", "123 MB", "500 TB"]
 
 
 def test_rows_stay_within_eighty_columns() -> None:
