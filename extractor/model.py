@@ -279,8 +279,8 @@ class Declaration:
 
     def __post_init__(self) -> None:
         for text, field, least in ((self.rig, "/rig", 1), (self.purpose, "/purpose", 0)):
-            if not isinstance(text, str) or not least <= len(text) <= 200:
-                raise InputError(f"needs {least} to 200 characters", code="bad-declaration", field=field)
+            if not isinstance(text, str) or not least <= len(text) <= 200 or not text.isprintable():
+                raise InputError(f"needs {least} to 200 characters, all printable", code="bad-declaration", field=field)
         _whole(self.rounds, "/rounds", 1, MAXIMUM_ROUNDS)
         _number(self.soundness, "/soundness", 0.0, 1.0, low_open=True, high_open=True)
         _choice(self.method, "/method", METHODS)

@@ -19,8 +19,8 @@ from extractor.documents import tally_counts
 from extractor.entropy import bound, planning
 from extractor.errors import Defect, InputError
 from extractor.hashing.toeplitz import SeedReader, ToeplitzStream, find_backend
-from extractor.model import Certificate, Declaration, RoundBatch, RoundRules, Tally
-from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, rebatch
+from extractor.model import Certificate, Convention, Declaration, RoundBatch, RoundRules, Tally
+from extractor.records.planes import BLOCK_ROUNDS, TELLING_ROUNDS, PlaneDigest, rebatch
 from extractor.records.rounds import open_rounds
 from extractor.seal import canonical
 
@@ -40,19 +40,28 @@ def declare(*, calibration: Tally | None = None, score: float | None = None, **a
         raise InputError("give either a calibration tally or a score", code="bad-usage", field="/score")
     if calibration is None:
         return planning.declare(score=score, **arguments)
-    known = {"convention": arguments["convention"]} if "convention" in arguments else {}
     return planning.declare(
-        score=planning.score_of(calibration, **known), calibration_digest=canonical.digest(tally_counts(calibration)),
+        score=planning.score_of(calibration, arguments.get("convention", Convention())), calibration_digest=canonical.digest(tally_counts(calibration)),
         calibration_rounds=calibration.rounds, **arguments)
 
 
 def batches_of(files: Iterable[tuple[BinaryIO, str]], rules: RoundRules) -> Iterator[RoundBatch]:
-    """All rounds of some files in order, in batches of BLOCK_ROUNDS; round numbers must run on from file to file."""
+    """All rounds of some files in order, in batches of BLOCK_ROUNDS.
+
+    Round numbers must run on from file to file, and no file may hold the rounds of an earlier one again.
+    """
     def one_by_one() -> Iterator[RoundBatch]:
         last: int | None = None
+        known: dict[str, str] = {}
         for file, name in files:
-            opened = open_rounds(file, name, rules)
-            yield from opened.batches()
+            opened, digest = open_rounds(file, name, rules), PlaneDigest()
+            for batch in opened.batches():
+                digest.update(batch)
+                yield batch
+            if opened.rounds >= TELLING_ROUNDS:
+                earlier = known.setdefault(digest.hexdigest(), name)
+                if earlier is not name:
+                    raise InputError(f"holds the same rounds as {earlier}; no round counts twice", code="repeated-rounds", file=name)
             if last is not None and opened.first_round is not None and opened.first_round != last + 1:
                 code = "missing-round" if opened.first_round > last + 1 else "repeated-round"
                 raise InputError(f"starts with round {opened.first_round}, the file before it ended with round {last}",

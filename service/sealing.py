@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+from extractor.records.planes import TELLING_ROUNDS
 from extractor.seal.entries import records_commitment
 from service.clock import now_text
 from service.errors import Conflict
@@ -12,7 +13,6 @@ from service.parts import Parts
 from service.runs import rounds_used_before
 from service.store.contracts import RunRow, SegmentRow
 
-TELLING_ROUNDS = 64     # shorter segments may be equal by chance
 NAMED = 50              # places listed one by one in an error
 
 
@@ -20,7 +20,7 @@ def seal(parts: Parts, run_id: str, segments: int, rounds: int) -> RunRow:
     """Seals the run if exactly these numbers arrived, and says so in the ledger; the same call again changes nothing.
 
     Errors raised: Conflict "segments-missing", "segments-differ", "rounds-differ", "missing-round", "repeated-round",
-    "rounds-used-before", "seal-differs" (sealed before with other numbers).
+    "repeated-rounds", "rounds-used-before", "seal-differs" (sealed before with other numbers).
     """
     with parts.store.write() as transaction:
         row = transaction.get_run(run_id)
@@ -31,7 +31,9 @@ def seal(parts: Parts, run_id: str, segments: int, rounds: int) -> RunRow:
             return row
         received = transaction.list_segments(run_id)
         _check(received, segments, rounds)
-        used = rounds_used_before(transaction, row, [one.planes_digest for one in received if one.rounds >= TELLING_ROUNDS])
+        telling = [one for one in received if one.rounds >= TELLING_ROUNDS]
+        _check_distinct(telling)
+        used = rounds_used_before(transaction, row, [one.planes_digest for one in telling])
         if used:
             raise Conflict(used, code="rounds-used-before")
         now = parts.ledger.time(transaction, now_text())
@@ -42,6 +44,18 @@ def seal(parts: Parts, run_id: str, segments: int, rounds: int) -> RunRow:
             "declaration": declaration.digest, "segments": segments, "rounds": rounds,
             "records_commitment": records_commitment(row.ledger_salt, [one.planes_digest for one in received])}, now)
         return transaction.get_run(run_id) or row
+
+
+def _check_distinct(received: Sequence[SegmentRow]) -> None:
+    """No round counts twice, so no segment may hold the rounds of another one."""
+    known: dict[str, SegmentRow] = {}
+    for segment in received:
+        earlier = known.setdefault(segment.planes_digest, segment)
+        if earlier is not segment:
+            detail = (f"segment {segment.number} ({segment.file_name}) holds the same rounds as segment {earlier.number} "
+                      f"({earlier.file_name})")
+            raise Conflict(f"{detail}; no round counts twice: open a new run without it", code="repeated-rounds",
+                           errors=({"pointer": "/segments", "detail": detail, "file": segment.file_name},))
 
 
 def _check(received: Sequence[SegmentRow], segments: int, rounds: int) -> None:

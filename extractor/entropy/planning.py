@@ -82,9 +82,14 @@ def declare(*, rig: str, rounds: int, method: str, soundness: float, score: floa
         output_bits = _available(draft, _expected(draft, score, confidence))
         if output_bits < 1:
             raise InputError(
-                f"{method} would certify nothing with probability {confidence:g}: {rounds} rounds at winning probability {score:g} and "
-                f"soundness {soundness:g} leave {output_bits} bits; plan more rounds, a better score or another method",
+                f"with {rounds} rounds at winning probability {score:g} and soundness {soundness:g}, an honest rig does not reach a single "
+                f"bit by {method} with probability {confidence:g}; plan more rounds, a better score or another method",
                 code="nothing-to-certify", field="/rounds")
+    elif (reached := _available(draft, _expected(draft, score, confidence))) < output_bits:
+        raise InputError(
+            f"an honest rig at winning probability {score:g} reaches {max(reached, 0)} bits with probability {confidence:g}, not {output_bits}: "
+            "it would probably be refused; declare fewer bits, more rounds, or a lower confidence if you accept that",
+            code="length-out-of-reach", field="/output/bits")
     return _with_length(draft, output_bits)
 
 
@@ -126,11 +131,14 @@ def compare(**arguments: Any) -> list[Plan | InputError]:
 
 
 def rounds_for(length: int, *, limit: int = 10**15, **arguments: Any) -> int:
-    """Fewest rounds, to about one part in 10^6, whose expected certified length reaches `length` bits; arguments as for `plan`.
+    """Fewest rounds, to about one part in 10^6, that give `length` bits; arguments as for `plan`.
+
+    Under a fixed length the reliable length has to reach it, under a length from credit the expected one.
 
     Raises InputError if even `limit` rounds are too few.
     """
-    reached = lambda n: plan(rounds=n, **arguments).certified_length >= length   # noqa: E731
+    measure = "certified_length" if arguments.get("output_rule") == "credit" else "reliable_length"
+    reached = lambda n: getattr(plan(rounds=n, **arguments), measure) >= length   # noqa: E731
     high = max(length // 2, 100)
     while not reached(high):
         if high >= limit:

@@ -42,9 +42,9 @@ def assumptions(declaration: Declaration, rounds: int) -> tuple[str, ...]:
         lines.append(f"The run stopped after {rounds} of {declaration.rounds} rounds by a decision that looked at nothing later than the "
                      "last round it kept; no rounds were left off afterwards.")
     if declaration.seed_source == "system":
-        lines.append("The random source of this service's operating system gave a uniform seed that nobody else knew before it was used.")
+        lines.append("The seed was drawn from the random source of an operating system, which gave uniform bits that nobody else knew before they were used.")
     else:
-        lines.append("The uploaded seed comes from a source the user answers for; the service only checked that it arrived after sealing.")
+        lines.append("The seed comes from a source that the user answers for.")
     if any(value is not None for value in declaration.no_click):
         lines.append("No-clicks were given the outcome declared before the run; no round was discarded for lack of a click.")
     if declaration.disclosure == "confidential":

@@ -2,7 +2,8 @@
 
 shape (n, 4) or (n, 5), bool, uint8 or int8   one row per round, columns x, y, a, b[, t]; C or Fortran order
 shape (4, m) or (5, m), uint8                 packed planes x, y, a, b[, t] in this order; 8 m rounds, least
-                                              significant bit first
+                                              significant bit first; refused if no byte exceeds 1, because then it is
+                                              surely an array of values that lies on its side
 shape (n,), structured                        fields x, y, a, b[, t] of those types and, perhaps, an integer field round
 
 A uint8 array of 4 or 5 rows and 4 or 5 columns could be either of the first two and is refused.
@@ -23,6 +24,7 @@ from extractor.records.source import Span
 
 NAME = "npy"
 _ORDER = ("x", "y", "a", "b", "t")
+_TELLING_ROUNDS = 64        # in fewer, honest packed planes may have no other byte by chance
 _SHAPES = "(n, 4) or (n, 5) values, or (4, bytes) or (5, bytes) uint8 planes, are needed"
 
 
@@ -56,11 +58,24 @@ def read(file: BinaryIO, intake: Intake) -> Iterator[RoundBatch]:
     intake.expect(8 * length if packed else length)
     check_size(source, rows * columns, intake)
     if packed == header.fortran_order:
-        return _interleaved(source, names, length, packed, dtype, intake)
+        batches = _interleaved(source, names, length, packed, dtype, intake)
+        return _upright(batches, intake) if packed else batches
     sources = {name: Span(file, start + k * length, length, intake.name, name) for k, name in enumerate(names)}
     if packed:
-        return read_packed(intake, sources, 8 * length)
+        return _upright(read_packed(intake, sources, 8 * length), intake)
     return read_values(intake, sources, dict.fromkeys(names, dtype), length)
+
+
+def _upright(batches: Iterator[RoundBatch], intake: Intake) -> Iterator[RoundBatch]:
+    """The same batches; an error at the end if every byte was 0 or 1: read as planes, such a file would invent rounds."""
+    seen, rounds = False, 0
+    for batch in batches:
+        seen = seen or any(int(batch.planes[name].max()) > 1 for name in ("x", "y", "a", "b"))
+        rounds += batch.rounds
+        yield batch
+    if not seen and rounds >= _TELLING_ROUNDS:
+        raise intake.fault("holds nothing but 0 and 1 in 4 or 5 long rows: that is an array of values on its side, not packed planes; "
+                           "write it with one row per round (transpose it)", "transposed")
 
 
 def _interleaved(source: Span, names: tuple[str, ...], length: int, packed: bool, dtype: np.dtype,

@@ -24,11 +24,11 @@ router = APIRouter(prefix="/v1/declarations", tags=["declarations"], route_class
 
 
 @router.post("", status_code=201, response_model=schemas.RecordedDeclaration, operation_id="record_declaration",
-             summary="Record a declaration in the ledger", responses=documented(400, 401, 403, 413, 415, 422))
+             summary="Record a declaration in the ledger", responses=documented(400, 401, 403, 413, 415, 422) | {200: {"model": schemas.RecordedDeclaration, "description": "Recorded before"}})
 def record(body: schemas.DeclarationDocument, parts: PartsOf, identity: Submitter, response: Response,
            key: IdempotencyKey = None) -> Any:
     """Gives it an id, a time and a place in the ledger: do this before the first round is taken. The rounds of a run
-    opened under it must all be later."""
+    opened under it must all be later. An identical declaration that you recorded before is answered with its record (200)."""
     declaration = declaration_from(body.model_dump())
     check_declaration(declaration)
     if declaration.rounds > parts.settings.run_rounds:
@@ -38,6 +38,10 @@ def record(body: schemas.DeclarationDocument, parts: PartsOf, identity: Submitte
 
     def make(transaction: Transaction) -> dict[str, Any]:
         declaration_id, digest = new_id("d"), canonical.digest(document)
+        earlier = transaction.find_declaration(identity.owner, digest)
+        if earlier is not None:         # a second, later record of the same text would only hide when it was declared
+            response.status_code = 200
+            return _shown(earlier)
         now = parts.ledger.time(transaction, now_text())
         index = parts.ledger.append(transaction, "declaration", declaration_id, {"digest": digest}, now)
         return _shown(transaction.insert_declaration(DeclarationRow(

@@ -18,7 +18,7 @@ from extractor.documents import certificate_document
 from extractor.errors import InputError, ProofError
 from extractor.hashing.seeds import SeedFile
 from extractor.model import PLANES, Declaration, RoundBatch, Tally
-from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, read_planes, rebatch, slice_batch
+from extractor.records.planes import BLOCK_ROUNDS, TELLING_ROUNDS, PlaneDigest, read_planes, rebatch, slice_batch
 from extractor.seal import canonical
 from extractor.seal.entries import certificate_commitment
 from extractor.tally import tally_batch
@@ -29,7 +29,6 @@ from service.jobs.publishing import certificate_of, publish
 from service.jobs.work import Work
 from service.parts import Parts
 from service.runs import rounds_used_before
-from service.sealing import TELLING_ROUNDS
 from service.store.blobs import PARTIAL, SEED, segment_name
 from service.store.contracts import RunRow, SegmentRow, Transaction
 from service.store.durable import rename_durably, temporary_path

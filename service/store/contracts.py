@@ -186,6 +186,8 @@ class Reading(Protocol):
     def list_tokens(self) -> list[TokenRow]: ...
 
     def get_declaration(self, declaration_id: str) -> DeclarationRow | None: ...
+    def find_declaration(self, owner: str, digest: str) -> DeclarationRow | None:
+        """The owner's earliest declaration with this digest."""
     def list_declarations(self, owner: str | None = None, *, before: int | None = None,
                           limit: int = 50) -> list[DeclarationRow]:
         """Newest first; `owner` None = of everybody; `before` = the smallest `number` of the page before."""

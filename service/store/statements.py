@@ -50,6 +50,11 @@ class SqlReading:
     def get_declaration(self, declaration_id: str) -> DeclarationRow | None:
         return self._one(DeclarationRow, t.declarations, t.declarations.c.id == declaration_id)
 
+    def find_declaration(self, owner: str, digest: str) -> DeclarationRow | None:
+        found = self._many(DeclarationRow, select(t.declarations).where(
+            t.declarations.c.owner == owner, t.declarations.c.digest == digest).order_by(t.declarations.c.number).limit(1))
+        return found[0] if found else None
+
     def list_declarations(self, owner: str | None = None, *, before: int | None = None,
                           limit: int = 50) -> list[DeclarationRow]:
         return self._many(DeclarationRow, _page(t.declarations, owner, before, limit))

@@ -250,7 +250,7 @@ def test_plan_finds_the_rounds_a_length_needs(capsys) -> None:
     rounds = json.loads(out)["rounds"]
     for factor, enough in ((1, True), (0.99, False)):
         _, out, _ = run(capsys, "plan", "--rounds", int(rounds * factor), *common)
-        assert (json.loads(out)["certified_length"] >= 100_000) == enough
+        assert (json.loads(out)["reliable_length"] >= 100_000) == enough
 
 
 @pytest.mark.parametrize(
@@ -413,6 +413,16 @@ def test_a_broken_declaration_is_refused_in_words(text: str, word: str, lab: Pat
 
 
 # ---- the program itself
+
+
+@pytest.mark.parametrize("words", [["list"], ["revoke", "0" * 16]])
+def test_tokens_are_looked_for_in_service_data_only(words: list[str], tmp_path: Path, capsys) -> None:
+    """A folder without a service is told as such and stays as it is; create says where the token is valid."""
+    code, _, err = run(capsys, "token", *words, "--data", tmp_path / "nothing")
+    assert code == 2 and "no service data in" in err and f"bellassay serve --data {tmp_path / 'nothing'}" in err
+    assert not (tmp_path / "nothing").exists()
+    code, _, err = run(capsys, "token", "create", "anna", "--data", tmp_path / "made")
+    assert code == 0 and str(tmp_path / "made") in err
 
 
 def test_usage_errors_have_exit_code_two(capsys) -> None:

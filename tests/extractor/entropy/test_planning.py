@@ -57,11 +57,12 @@ def test_the_chosen_order_is_the_best():
 
 
 def test_rounds_for_a_length():
-    """rounds_for finds the fewest rounds: they reach the length, slightly fewer do not."""
-    arguments = dict(score=0.8, soundness=1e-9, method="factor-closed")
-    rounds = planning.rounds_for(10**5, **arguments)
-    assert planning.plan(rounds=rounds, **arguments).certified_length >= 10**5
-    assert planning.plan(rounds=rounds - rounds // 10**3, **arguments).certified_length < 10**5
+    """rounds_for finds the fewest rounds: they reach the length (reliably if it is fixed), slightly fewer do not."""
+    for rule, measure in (("fixed", "reliable_length"), ("credit", "certified_length")):
+        arguments = dict(score=0.8, soundness=1e-9, method="factor-closed", output_rule=rule)
+        rounds = planning.rounds_for(10**5, **arguments)
+        assert getattr(planning.plan(rounds=rounds, **arguments), measure) >= 10**5
+        assert getattr(planning.plan(rounds=rounds - rounds // 10**3, **arguments), measure) < 10**5
     with pytest.raises(InputError, match="more than"):
         planning.rounds_for(10**9, score=0.7500001, soundness=1e-9, method="factor-closed")
 
@@ -90,8 +91,11 @@ def test_bad_arguments_are_named(changes):
 
 def test_nothing_to_certify_is_said_before_the_run():
     """declare refuses to write a declaration that an honest rig would not meet."""
-    with pytest.raises(InputError, match="certify nothing"):
+    with pytest.raises(InputError, match="does not reach a single bit"):
         planning.declare(rig="Wren bench", rounds=1000, method="eat-2018", soundness=1e-9, score=0.8)
+    for method in METHODS:
+        with pytest.raises(InputError, match="probably be refused"):
+            planning.declare(rig="Wren bench", rounds=10**7, method=method, soundness=1e-9, score=0.8, output_bits=4 * 10**6)
 
 
 def test_score_of_a_calibration_weighs_settings_equally():

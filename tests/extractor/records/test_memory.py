@@ -115,7 +115,7 @@ class _Counter(io.RawIOBase):
 
 
 def _zeros(batches: int):
-    planes = {name: np.zeros(2**17, np.uint8) for name in PLANES} | {"t": np.full(2**17, 255, np.uint8)}
+    planes = {name: np.zeros(2**17, np.uint8) for name in PLANES} | {"t": np.full(2**17, 255, np.uint8), "x": np.full(2**17, 85, np.uint8)}
     for _ in range(batches):
         yield RoundBatch(2**20, planes)
 

@@ -88,7 +88,7 @@ def test_an_idempotency_key_makes_one_run(service: Service, north: Caller) -> No
     ask(north)
     assert {answer.status_code for answer in answers} == {201}
     assert len({answer.json()["id"] for answer in answers}) == 1
-    other = north.declare()["id"]
+    other = north.declare(document(purpose="another"))["id"]
     problem(north.post("/v1/runs", {"declaration": other}, headers={"Idempotency-Key": "first-run"}), 422,
             "idempotency-key-reused")
     assert service.caller("east").post("/v1/declarations", document(),
@@ -102,10 +102,19 @@ def test_an_idempotency_key_makes_one_run(service: Service, north: Caller) -> No
 def test_declaring_with_a_key_records_once(north: Caller) -> None:
     """A repeated declaration with a key gives the same id and one ledger entry."""
     size = north.get("/v1/ledger/entries").json()["size"]
-    first, second = (north.post("/v1/declarations", document(), headers={"Idempotency-Key": "d-key"}).json()
-                     for _ in range(2))
+    body = document(purpose="recorded once")
+    first, second = (north.post("/v1/declarations", body, headers={"Idempotency-Key": "d-key"}).json() for _ in range(2))
     assert first == second
     assert north.get("/v1/ledger/entries").json()["size"] == size + 1
+
+
+def test_an_identical_declaration_keeps_its_first_record(service: Service, north: Caller) -> None:
+    """The same text again is answered with the earlier record, so its time is not hidden; another owner gets one of their own."""
+    body = document(purpose="declared early")
+    first, again = (north.post("/v1/declarations", body) for _ in range(2))
+    assert (first.status_code, again.status_code) == (201, 200) and first.json() == again.json()
+    other = service.caller("east").post("/v1/declarations", body)
+    assert other.status_code == 201 and other.json()["id"] != first.json()["id"]
 
 
 def test_lists_come_in_pages(service: Service) -> None:

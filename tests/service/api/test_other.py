@@ -24,8 +24,8 @@ def test_the_ledger_proves_itself(service: Service) -> None:
     writer, auditor = service.caller(), service.caller("auditor", ["audit"])
     writer.declare()
     old = opened(auditor)
-    for _ in range(4):
-        writer.declare()
+    for k in range(4):
+        writer.declare(document(purpose=f"number {k}"))
     new = opened(auditor)
     page = auditor.get("/v1/ledger/entries").json()
     assert page["size"] == new.size == old.size + 4 and len(page["entries"]) == new.size

@@ -282,3 +282,12 @@ def test_sealing_needs_what_arrived(north: Caller) -> None:
     problem(north.put(f"/v1/runs/{run}/segments/4", parts[0]), 409, "run-sealed")
     problem(north.put(f"/v1/runs/{run}/segments/1", parts[1]), 409, "run-sealed")
     assert north.put(f"/v1/runs/{run}/segments/1", parts[0]).status_code == 200
+
+
+def test_a_segment_that_repeats_another_is_refused_at_the_seal(north: Caller) -> None:
+    """The same rounds as two segments would count twice: the seal names both."""
+    run = north.open_run(document(rounds=3 * ROUNDS))
+    for number, data in ((1, npz(seed=41)), (2, npz(seed=42)), (3, npz(seed=41))):
+        assert north.put(f"/v1/runs/{run}/segments/{number}?name=f{number}.npz", data).status_code == 201
+    body = problem(north.post(f"/v1/runs/{run}/seal", {"segments": 3, "rounds": 3 * ROUNDS}), 409, "repeated-rounds")
+    assert "segment 3 (f3.npz) holds the same rounds as segment 1 (f1.npz)" in body["detail"]
