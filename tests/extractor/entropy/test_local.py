@@ -37,7 +37,7 @@ def test_local_boxes_with_memory_hardly_ever_earn_bits(policy, settings):
     """Of 20 000 local runs with memory, credit enough for one bit turns up in no more than a share `soundness` allows."""
     rounds = 400
     declaration = planning.declare(rig="no entanglement", rounds=rounds, method="factor-closed", soundness=SOUNDNESS, score=0.83,
-                                   output_rule="fixed", output_bits=1, settings=settings)
+                                   output_bits=1, settings=settings, confidence=1e-9)
     rig = rigs.MemoryLocalRig(policy=policy, settings=settings, reacts_every=4, setting_bias=(settings.bias, settings.bias))
     tallies = rigs.simulate_many(rig, rounds, RUNS, seed=7)
     earned = int((fast_lengths(tallies, declaration) >= 1).sum())
@@ -47,7 +47,7 @@ def test_local_boxes_with_memory_hardly_ever_earn_bits(policy, settings):
 
 def test_fast_lengths_agree_with_certificates():
     """The shortcut used above gives the same decision as the full certificate."""
-    declaration = planning.declare(rig="no entanglement", rounds=300, method="factor-closed", soundness=0.2, score=0.8, output_bits=1)
+    declaration = planning.declare(rig="no entanglement", rounds=300, method="factor-closed", soundness=0.2, score=0.8, output_bits=1, confidence=1e-9)
     tallies = rigs.simulate_many(rigs.LocalRig.always(0), 300, 100, seed=3)
     assert int((fast_lengths(tallies, declaration) >= 1).sum()) == shares_with_bits(tallies, declaration)
 
@@ -57,7 +57,7 @@ def test_deterministic_boxes_hardly_ever_earn_bits(strategy):
     """The same for each local deterministic strategy, spot-checking, over 5 000 runs."""
     settings = Settings(0.5)
     declaration = planning.declare(rig="no entanglement", rounds=500, method="factor-closed", soundness=SOUNDNESS, score=0.84,
-                                   output_bits=1, settings=settings)
+                                   output_bits=1, settings=settings, confidence=1e-9)
     tallies = rigs.simulate_many(rigs.LocalRig.always(strategy, settings=settings), 500, 5000, seed=strategy)
     earned = int((fast_lengths(tallies, declaration) >= 1).sum())
     assert stats.binom.sf(earned - 1, 5000, 2 * SOUNDNESS) > 1e-4
@@ -77,7 +77,7 @@ def test_local_boxes_never_meet_an_accumulation_threshold(method):
 def test_stopping_at_the_best_moment_does_not_help_local_boxes():
     """Local boxes whose run is stopped the moment its credit suffices: still no more often than `soundness` allows (5 000 runs)."""
     rounds, runs = 1500, 5000
-    declaration = planning.declare(rig="no entanglement", rounds=rounds, method="factor-closed", soundness=SOUNDNESS, score=0.83, output_bits=1)
+    declaration = planning.declare(rig="no entanglement", rounds=rounds, method="factor-closed", soundness=SOUNDNESS, score=0.83, output_bits=1, confidence=1e-9)
     won, lost = max(declaration.table.test), min(declaration.table.test)
     penalty = sum(t.bits for t in bound.certify(declaration, Tally.empty()).terms)       # no rounds: nothing but the penalty
     wins = np.random.default_rng(9).random((runs, rounds)) < 0.75
