@@ -1,0 +1,233 @@
+"""Looks for the score table that earns an expected rig the most. Trusted for nothing: `two_sided_grid` certifies what is found.
+
+The programme. With expected frequencies nu(k) of the cells and R_s(k) what strategy s makes of cell k (settings' probability
+times Rényi power), maximise sum_k nu(k) ln F(k) subject to sum_k R_s(k) F(k) <= 1 for all s. Its dual is a fit of nu by a mixture of
+strategies: F = nu/mu, mu = sum_s l_s R_s, and the gain is the divergence of nu from mu. Strategies are added where the present table is
+exceeded most (cutting planes): the worst places of a grid, moved uphill, and the certifier's own worst nodes. The inner programme is
+solved by a primal-dual interior-point method in the scale d(ln F) * sqrt(nu), in which the curvature of the goal is 1 in every
+direction, so that cells of probability 1e-8 and 1/4 are treated alike.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from extractor.entropy import two_sided, two_sided_grid
+from extractor.entropy.two_sided import Problem
+
+LN2 = math.log(2)
+_BASE = 24                       # places per side of the search grid
+
+
+@dataclass
+class Strategies:
+    """A pool of strategies: trial states p (4, n), v (4, 4, n) and angles (2, n) in units of pi."""
+
+    p: np.ndarray
+    v: np.ndarray
+    angles: np.ndarray
+
+    @classmethod
+    def none(cls) -> Strategies:
+        return cls(np.empty((4, 0)), np.empty((4, 4, 0)), np.empty((2, 0)))
+
+    def joined(self, p: np.ndarray, v: np.ndarray, angles: np.ndarray) -> Strategies:
+        return Strategies(np.concatenate([self.p, p], 1), np.concatenate([self.v, v], 2), np.concatenate([self.angles, angles], 1))
+
+    def kept(self, which: np.ndarray) -> Strategies:
+        return Strategies(self.p[:, which], self.v[:, :, which], self.angles[:, which])
+
+    def powers(self, order: float) -> np.ndarray:
+        """Rényi powers (n, 2, 2, 2, 2) indexed [x, y, a, b]."""
+        alice, bob = two_sided.directions(self.angles[0]), two_sided.directions(self.angles[1])
+        m = two_sided._components(self.v, alice, bob)
+        t = np.einsum("xaybin,in->nxyab", m * m, self.p ** (1 / order))
+        return t ** order
+
+
+def deterministic() -> np.ndarray:
+    """The 16 local deterministic strategies as (16, 2, 2, 2, 2) indexed [x, y, a, b]."""
+    rows = np.zeros((16, 2, 2, 2, 2))
+    for s in range(16):
+        for x in range(2):
+            for y in range(2):
+                rows[s, x, y, s >> (3 - x) & 1, s >> (1 - y) & 1] = 1
+    return rows
+
+
+@dataclass(frozen=True)
+class Layout:
+    """How settings probabilities turn Rényi powers into rows of 16 test cells and, if there are generation rounds, 4 more.
+
+    distributions  (e, 4): the allowed test distributions, each gives a row
+    """
+
+    gamma: float
+    distributions: np.ndarray
+    generation: tuple[int, int]
+
+    def rows(self, powers: np.ndarray) -> np.ndarray:
+        """(n * e, 16 or 20)"""
+        tests = self.gamma * powers[:, None] * self.distributions.reshape(1, -1, 2, 2, 1, 1)
+        flat = tests.reshape(-1, 16)
+        if self.gamma == 1:
+            return flat
+        generation = (1 - self.gamma) * powers[:, self.generation[0], self.generation[1]].reshape(-1, 1, 4)
+        return np.concatenate([flat, np.broadcast_to(generation, (len(powers), len(self.distributions), 4)).reshape(-1, 4)], axis=1)
+
+    def problems(self, factors: np.ndarray, e: float) -> list[Problem]:
+        """The certification problems of a table, one per allowed distribution."""
+        found = []
+        for distribution in self.distributions:
+            weights = self.gamma * distribution.reshape(2, 2)
+            mass = weights[:, :, None, None] * (factors[:16].reshape(2, 2, 2, 2) - 1)
+            if self.gamma < 1:
+                weights = weights.copy()
+                weights[self.generation] += 1 - self.gamma
+                mass[self.generation] += (1 - self.gamma) * (factors[16:].reshape(2, 2) - 1)
+            found.append(Problem(weights, (mass / weights[:, :, None, None] / e).transpose(0, 2, 1, 3).copy(), e))
+        return found
+
+
+def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float) -> tuple[np.ndarray, np.ndarray]:
+    """(F, multipliers): maximise sum nu ln F subject to rows @ F <= 1, to about `accuracy` in the goal."""
+    m, root = len(rows), np.sqrt(nu)
+    factors = np.full(len(nu), 0.5)
+    slack = np.maximum(1 - rows @ factors, 1e-3)
+    multipliers = np.full(m, 1.0 / m)
+    for _ in range(120):
+        gap = float(slack @ multipliers) / m
+        primal = 1 - rows @ factors - slack
+        dual = nu / factors - rows.T @ multipliers
+        if gap * m < accuracy and np.max(np.abs(primal)) < accuracy and np.max(np.abs(dual) * factors) < 1e-10:
+            break
+        scaled = rows * (factors / root)                       # rows in the scale y = root * dF/F
+        k = np.zeros((len(nu) + m, len(nu) + m))
+        k[:len(nu), :len(nu)] = np.eye(len(nu))
+        k[:len(nu), len(nu):], k[len(nu):, :len(nu)] = scaled.T, scaled
+        k[range(len(nu), len(nu) + m), range(len(nu), len(nu) + m)] = -slack / multipliers
+
+        def step(tau: float, corrections: np.ndarray | float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+            target = (tau - corrections) / multipliers          # new slack, to first order, before the change of multipliers
+            right = np.concatenate([dual * factors / root, primal + slack - target])
+            both = np.linalg.solve(k, right)
+            d_multipliers = both[len(nu):]
+            return both[:len(nu)] * factors / root, target - slack - slack / multipliers * d_multipliers, d_multipliers
+
+        def longest(d_f: np.ndarray, d_s: np.ndarray, d_l: np.ndarray) -> float:
+            ratios = np.concatenate([d_f / factors, d_s / slack, d_l / multipliers])
+            worst = float(np.min(ratios))
+            return min(1.0, -0.99 / worst) if worst < 0 else 1.0
+
+        try:
+            trial = step(0.0, 0.0)
+            length = longest(*trial)
+            predicted = float((slack + length * trial[1]) @ (multipliers + length * trial[2])) / m
+            d_f, d_s, d_l = step(gap * max(predicted / gap, 0.0) ** 3 + 1e-3 * accuracy / m * 0, trial[1] * trial[2])
+        except np.linalg.LinAlgError:
+            break
+        length = longest(d_f, d_s, d_l)
+        factors, slack, multipliers = factors + length * d_f, slack + length * d_s, multipliers + length * d_l
+    return factors / max(1.0, float(np.max(rows @ factors))), multipliers
+
+
+class Oracle:
+    """Finds strategies that exceed a table, warm from call to call."""
+
+    def __init__(self) -> None:
+        line = np.linspace(0, 1, _BASE + 1)
+        self.angles = np.array(np.meshgrid(line, line, indexing="ij")).reshape(2, -1)
+        self.p, self.v = two_sided.flat_states(self.angles.shape[1])
+        self.steps = 25
+
+    def worst(self, problem: Problem, count: int = 10) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """(values, p, v, angles) of up to `count` local maxima, moved uphill."""
+        values = np.empty(self.angles.shape[1])
+        for begin in range(0, len(values), 320):
+            part = slice(begin, begin + 320)
+            self.p[:, part], self.v[:, :, part], values[part] = _climb(problem, self.p[:, part], self.v[:, :, part], self.angles[:, part], self.steps)
+        self.steps = 8
+        square = values.reshape(_BASE + 1, _BASE + 1)
+        around = np.full((_BASE + 3, _BASE + 3), -np.inf)
+        around[1:-1, 1:-1] = square
+        top = np.max([around[1 + di:_BASE + 2 + di, 1 + dj:_BASE + 2 + dj] for di in (-1, 0, 1) for dj in (-1, 0, 1)], axis=0)
+        peaks = np.flatnonzero((square >= top).reshape(-1))
+        peaks = peaks[np.argsort(-values[peaks])][:count]
+        return _refined(problem, self.p[:, peaks], self.v[:, :, peaks], self.angles[:, peaks])
+
+
+def _climb(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray, steps: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    alice, bob = two_sided.directions(angles[0]), two_sided.directions(angles[1])
+    p, v = two_sided.ascend(problem, p, v, alice, bob, steps, 1e-9)
+    h, _, _ = two_sided.gradient(problem, p, v, alice, bob)
+    return p, v, sum(p[i] * h[i, i] for i in range(4))
+
+
+def _refined(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Moves each strategy's angles uphill: a 3 by 3 stencil, its quadratic fit, and a third of the step, eight times."""
+    n, h = angles.shape[1], 0.5 / _BASE
+    offsets = np.array([(di, dj) for di in (-1, 0, 1) for dj in (-1, 0, 1)], dtype=float).T           # (2, 9)
+    values = np.full(n, -np.inf)
+    for _ in range(8):
+        centre = np.clip(angles, 0, 1)
+        places = np.clip(centre[:, :, None] + h * offsets[:, None, :], 0, 1).reshape(2, -1)
+        p9, v9, g = _climb(problem, np.repeat(p, 9, 1), np.repeat(v, 9, 2), places, 6)
+        grid = g.reshape(n, 9)
+        best = np.argmax(grid, axis=1) + 9 * np.arange(n)
+        p, v, values, angles = p9[:, best], v9[:, :, best], g[best], places[:, best]
+        f = grid.reshape(n, 3, 3)
+        gi, gj = (f[:, 2, 1] - f[:, 0, 1]) / 2, (f[:, 1, 2] - f[:, 1, 0]) / 2
+        hii, hjj = f[:, 2, 1] - 2 * f[:, 1, 1] + f[:, 0, 1], f[:, 1, 2] - 2 * f[:, 1, 1] + f[:, 1, 0]
+        hij = (f[:, 2, 2] - f[:, 2, 0] - f[:, 0, 2] + f[:, 0, 0]) / 4
+        det = hii * hjj - hij * hij
+        good = (hii < 0) & (det > 0)
+        det = np.where(good, det, 1.0)
+        move = np.stack([-(hjj * gi - hij * gj) / det, -(hii * gj - hij * gi) / det])
+        good &= np.all(np.abs(move) <= 1, axis=0)
+        angles = np.where(good, np.clip(centre + h * np.clip(move, -1, 1), 0, 1), angles)
+        h /= 3
+    p, v, values = _climb(problem, p, v, angles, 10)
+    return values, p, v, angles
+
+
+@dataclass
+class Search:
+    """A table search for one rig and settings; strategies found at one order serve the next."""
+
+    nu: np.ndarray
+    layout: Layout
+    pool: Strategies
+    oracle: list[Oracle]
+
+    @classmethod
+    def of(cls, nu: np.ndarray, layout: Layout) -> Search:
+        return cls(nu, layout, Strategies.none(), [Oracle() for _ in layout.distributions])
+
+    def fit(self, e: float, keep: int = 160) -> tuple[np.ndarray, float]:
+        """(F, gain in bits per round) under the strategies known so far."""
+        powers = np.concatenate([deterministic(), self.pool.powers(1 + e)])
+        rows = self.layout.rows(powers)
+        factors, multipliers = best_factors(self.nu, rows, 1e-6 * e)
+        weights = multipliers.reshape(len(powers), -1).sum(axis=1)[16:]
+        if len(weights) > keep:
+            self.pool = self.pool.kept(np.argsort(-weights)[:keep])
+        return factors, float(self.nu @ np.log(factors)) / (e * LN2)
+
+    def improve(self, e: float, rounds: int, relative: float) -> tuple[np.ndarray, float, float]:
+        """(F, gain, worst excess in bits): cutting planes until the worst known excess is below `relative` of the gain."""
+        factors, gain = self.fit(e)
+        worst = math.inf
+        for _ in range(rounds):
+            worst = 0.0
+            for problem, oracle in zip(self.layout.problems(factors, e), self.oracle):
+                values, p, v, angles = oracle.worst(problem)
+                worst = max(worst, float(np.max(values)) / LN2)
+                over = values > 0.1 * relative * max(gain, 1e-12) * LN2
+                self.pool = self.pool.joined(p[:, over], v[:, :, over], angles[:, over])
+            if worst < relative * max(gain, 1e-12):
+                break
+            factors, gain = self.fit(e)
+        return factors, gain, worst
