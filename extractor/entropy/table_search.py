@@ -15,7 +15,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from extractor.entropy import two_sided, two_sided_grid
+from extractor.entropy import two_sided
+from extractor.entropy.search import best_in_log
 from extractor.entropy.two_sided import Problem
 
 LN2 = math.log(2)
@@ -92,15 +93,19 @@ class Layout:
         return found
 
 
-def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float) -> tuple[np.ndarray, np.ndarray]:
-    """(F, multipliers): maximise sum nu ln F subject to rows @ F <= 1, to about `accuracy` in the goal."""
-    m, root = len(rows), np.sqrt(nu)
+def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float, least: float = 0.0) -> tuple[np.ndarray, np.ndarray]:
+    """(F, multipliers of the rows): maximise sum nu ln F subject to rows @ F <= 1 and F >= least, to about `accuracy` in the goal."""
+    strategies, root = len(rows), np.sqrt(nu)
+    limits = np.ones(strategies)
+    if least:
+        rows, limits = np.concatenate([rows, -np.eye(len(nu))]), np.concatenate([limits, np.full(len(nu), -least)])
+    m = len(rows)
     factors = np.full(len(nu), 0.5)
-    slack = np.maximum(1 - rows @ factors, 1e-3)
+    slack = np.maximum(limits - rows @ factors, 1e-3)
     multipliers = np.full(m, 1.0 / m)
     for _ in range(120):
         gap = float(slack @ multipliers) / m
-        primal = 1 - rows @ factors - slack
+        primal = limits - rows @ factors - slack
         dual = nu / factors - rows.T @ multipliers
         if gap * m < accuracy and np.max(np.abs(primal)) < accuracy and np.max(np.abs(dual) * factors) < 1e-10:
             break
@@ -126,12 +131,12 @@ def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float) -> tuple[np.
             trial = step(0.0, 0.0)
             length = longest(*trial)
             predicted = float((slack + length * trial[1]) @ (multipliers + length * trial[2])) / m
-            d_f, d_s, d_l = step(gap * max(predicted / gap, 0.0) ** 3 + 1e-3 * accuracy / m * 0, trial[1] * trial[2])
+            d_f, d_s, d_l = step(gap * max(predicted / gap, 0.0) ** 3, trial[1] * trial[2])
         except np.linalg.LinAlgError:
             break
         length = longest(d_f, d_s, d_l)
         factors, slack, multipliers = factors + length * d_f, slack + length * d_s, multipliers + length * d_l
-    return factors / max(1.0, float(np.max(rows @ factors))), multipliers
+    return factors / max(1.0, float(np.max(rows[:strategies] @ factors))), multipliers[:strategies]
 
 
 class Oracle:
@@ -195,39 +200,68 @@ def _refined(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray)
 
 @dataclass
 class Search:
-    """A table search for one rig and settings; strategies found at one order serve the next."""
+    """A table search for one rig and settings; strategies found at one order serve the next.
+
+    nu           expected frequencies of the 16 test cells [x, y, a, b] and, if there are generation rounds, 4 more
+    lowest       lowest credit of a cell, in bits
+    """
 
     nu: np.ndarray
     layout: Layout
+    lowest: float
     pool: Strategies
-    oracle: list[Oracle]
+    oracle: Oracle
+    turn: int = 0
 
     @classmethod
-    def of(cls, nu: np.ndarray, layout: Layout) -> Search:
-        return cls(nu, layout, Strategies.none(), [Oracle() for _ in layout.distributions])
+    def of(cls, nu: np.ndarray, layout: Layout, lowest: float) -> Search:
+        return cls(nu, layout, lowest, Strategies.none(), Oracle())
 
-    def fit(self, e: float, keep: int = 160) -> tuple[np.ndarray, float]:
+    def fit(self, e: float, keep: int = 140) -> tuple[np.ndarray, float]:
         """(F, gain in bits per round) under the strategies known so far."""
         powers = np.concatenate([deterministic(), self.pool.powers(1 + e)])
         rows = self.layout.rows(powers)
-        factors, multipliers = best_factors(self.nu, rows, 1e-6 * e)
+        factors, multipliers = best_factors(self.nu, rows, 1e-6 * e, 2.0 ** (self.lowest * e))
         weights = multipliers.reshape(len(powers), -1).sum(axis=1)[16:]
         if len(weights) > keep:
             self.pool = self.pool.kept(np.argsort(-weights)[:keep])
         return factors, float(self.nu @ np.log(factors)) / (e * LN2)
 
-    def improve(self, e: float, rounds: int, relative: float) -> tuple[np.ndarray, float, float]:
-        """(F, gain, worst excess in bits): cutting planes until the worst known excess is below `relative` of the gain."""
+    def improve(self, e: float, rounds: int, relative: float) -> tuple[np.ndarray, float]:
+        """(F, gain): cutting planes until the worst excess found is below `relative` of the gain."""
         factors, gain = self.fit(e)
-        worst = math.inf
+        quiet = 0
         for _ in range(rounds):
-            worst = 0.0
-            for problem, oracle in zip(self.layout.problems(factors, e), self.oracle):
-                values, p, v, angles = oracle.worst(problem)
-                worst = max(worst, float(np.max(values)) / LN2)
-                over = values > 0.1 * relative * max(gain, 1e-12) * LN2
-                self.pool = self.pool.joined(p[:, over], v[:, :, over], angles[:, over])
-            if worst < relative * max(gain, 1e-12):
-                break
+            found = self.layout.problems(factors, e)
+            values, p, v, angles = self.oracle.worst(found[self.turn % len(found)])
+            self.turn += 1
+            aim = relative * max(gain, 1e-12) * LN2
+            over = values > 0.1 * aim
+            self.pool = self.pool.joined(p[:, over], v[:, :, over], angles[:, over])
+            if np.max(values) < aim:
+                quiet += 1
+                if quiet == min(len(found), 4):
+                    break
+                continue
+            quiet = 0
             factors, gain = self.fit(e)
-        return factors, gain, worst
+        return factors, gain
+
+    def best_excess(self, rounds: int, cost: float) -> float:
+        """e = order - 1 that makes rounds * gain - cost/e largest under the strategies known so far."""
+        low = min(max(cost / (2.5 * rounds), 1e-8), 0.9)
+        return best_in_log(lambda e: rounds * self.fit(e)[1] - cost / e, low, 1.0, points=17)
+
+
+def best_table(search: Search, rounds: int, cost: float, order: float | None, relative: float = 1e-3) -> tuple[float, np.ndarray, float]:
+    """(e, F, gain in bits per round) for a run of `rounds` rounds that pays cost * order/(order - 1) bits; order None = search for it."""
+    if order is not None:
+        e = order - 1
+        return e, *search.improve(e, 20, relative)
+    e = min(max(math.sqrt(cost / rounds), 1e-7), 0.5)
+    for _ in range(8):
+        search.improve(e, 4, relative)
+        before, e = e, search.best_excess(rounds, cost)
+        if abs(math.log(e / before)) < 0.05:
+            break
+    return e, *search.improve(e, 20, relative)

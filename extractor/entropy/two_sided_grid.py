@@ -62,6 +62,18 @@ def interpolation_error(problem: Problem, side: int, width: np.ndarray) -> np.nd
     return 0.5 * order * trace * total * _ROUNDINGS
 
 
+def best_local(problem: Problem) -> float:
+    """Excess of the best local deterministic strategy."""
+    best = -np.inf
+    for s in range(16):
+        total = 0.0
+        for x in range(2):
+            for y in range(2):
+                total += float(problem.weights[x, y]) * float(problem.excess[x, s >> x & 1, y, s >> (2 + y) & 1])
+        best = max(best, total)
+    return best
+
+
 class _Nodes:
     """The nodes evaluated so far, by place."""
 
@@ -118,12 +130,13 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
     nodes.add(grid, None)
     i, j = np.array(np.meshgrid(line[:-1], line[:-1], indexing="ij")).reshape(2, -1)
     size = np.full(i.shape, step)
+    local = best_local(problem)
     settled = -np.inf                                  # largest bound of the cells that need no more work
     for _ in range(DEPTH * 4):
         corners = np.stack([nodes.find(i + di * size, j + dj * size) for di in (0, 1) for dj in (0, 1)])
         error = interpolation_error(problem, 0, size) + interpolation_error(problem, 1, size)
         for _ in range(12):
-            best = float(np.max(nodes.attained))
+            best = max(local, float(np.max(nodes.attained)))
             goal = target if target is not None else best + tolerance
             if target is not None and best > target:
                 return _result(nodes, np.inf)
