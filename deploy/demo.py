@@ -124,15 +124,15 @@ class Demo:
 
     def summary(self, run: dict, taken: dict) -> None:
         certificate = json.loads((self.job / "collected/certificate.json").read_text())
-        terms = [term["bits"] for term in certificate["terms"]]
+        credit = sum(term["bits"] for term in certificate["terms"] if term["name"] == "credit")
         score = run["score"]
         say("")
         for name, value in (
             ("rounds", f"{grouped(certificate['rounds'])}, simulated at {taken['rounds_per_second']:.3g} per second"),
             ("score", f"{score['winning_probability']:.7f} ± {score['winning_probability_error']:.7f}"),
             ("CHSH value S", f"{score['chsh']:.6f} ± {score['chsh_error']:.6f}"),
-            ("credit", f"{grouped(sum(bits for bits in terms if bits > 0))} bits"),
-            ("penalty", f"{grouped(-sum(bits for bits in terms if bits < 0))} bits"),
+            ("credit", f"{grouped(credit)} bits"),
+            ("penalty", f"{grouped(credit - certificate['available_bits'])} bits"),
             ("soundness error", f"{certificate['soundness']:g}"),
             ("certified length", f"{grouped(certificate['certified_length'])} bits"),
             ("stages", ", ".join(f"{stage} {seconds:.1f} s" for stage, seconds in run["stage_seconds"].items())),
@@ -163,7 +163,9 @@ def whole(text: str) -> int:
 
 def main() -> int:
     parser = argparse.ArgumentParser(
-        prog="deploy/demo", allow_abbrev=False, description="The whole job on an invented rig, against a service of its own."
+        prog="deploy/demo",
+        allow_abbrev=False,
+        description="The whole job on an invented rig, against a service of its own.",
     )
     parser.add_argument("--rounds", type=whole, default=10**8, metavar="N", help="rounds of the run (default 1e8)")
     parser.add_argument("--segments", type=whole, default=4, metavar="S", help="files they are taken in (default 4)")

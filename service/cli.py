@@ -12,6 +12,7 @@ from collections.abc import Sequence
 from extractor.errors import InputError, ProofError
 from service.commands import collect, offline, planning, remote, serving, simulate, submit, tally
 from service.commands.common import BAD_INPUT, REFUSED, Parser, note
+from service.errors import StorageFailed, Unavailable
 
 GROUPS = (serving, simulate, tally, planning, offline, submit, remote, collect)
 
@@ -20,7 +21,8 @@ def build_parser() -> argparse.ArgumentParser:
     """The parser with all commands."""
     parser = Parser(
         prog="bellassay",
-        description="Rounds of a Bell-test rig in; certified random bits out, with a report\nthat can be checked offline.",
+        description="Rounds of a Bell-test rig in; certified random bits out, with a report\n"
+        "that can be checked offline.",
         epilog="example:\n  bellassay serve\n  bellassay COMMAND --help\n\n"
         "exit codes: 0 done, 1 refused or verification failed, 2 bad input or usage",
     )
@@ -52,6 +54,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
                 if error.get(name) not in (None, "")
             )
             note(f"  {place}: {error.get('detail', '')}" if place else f"  {error.get('detail', '')}")
+        return BAD_INPUT
+    except (Unavailable, StorageFailed) as fault:
+        note(f"bellassay: {fault}")
         return BAD_INPUT
     except BrokenPipeError:
         sys.stderr.close()  # the reader of our output has gone: nobody is left to tell

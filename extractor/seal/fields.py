@@ -18,6 +18,7 @@ _SALT = re.compile(r"[0-9a-f]{64}\Z")
 
 def check_fields(report: Mapping[str, Any], declaration: Declaration, certificate: Certificate) -> None:
     """Raise ProofError, naming the field, unless the report's own fields are well formed and fit the certificate."""
+    _need(certificate.outcome in ("certified", "refused"), "/certificate/document/outcome")
     _need(_is_text(report["run"]), "/run")
     _need(isinstance(report["score"], dict), "/score")
     _need(_is_list_of(report["diagnostics"], dict), "/diagnostics")

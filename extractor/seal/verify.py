@@ -144,13 +144,14 @@ def _signed_report(files: dict[str, bytes], verifier: note.Verifier, log: _Log) 
     signed = note.open(files["report.note"].decode("utf-8", errors="surrogateescape"), [verifier])
     if signed != bundle.report_note_text(files["report.json"]):
         raise ProofError("report.note signs another report than report.json", code="other-report")
-    report = _document(files, "report.json")
+    report = _document(files, "report.json", require_canonical=False)
     if report.get("format") != REPORT_FORMAT:
         raise ProofError(f"report.json is not a {REPORT_FORMAT!r}", code="bad-report")
     for name in ("declaration", "certificate"):
         claimed = report.get(name)
         if not isinstance(claimed, dict) or claimed.get("digest") != canonical.bytes_digest(files[f"{name}.json"]):
             raise ProofError(f"{name}.json is not the {name} of the report: its digest is another", code="disagreement")
+    _document(files, "report.json")
     log.right("signature", f"{verifier.name} signed exactly this report, with this declaration and this certificate.")
     return report
 
@@ -331,9 +332,9 @@ def _extract(papers: _Papers, files: RoundFiles, seed: BinaryIO) -> bytes:
                                 SeedFile(seed, papers.certificate.seed_bits))
 
 
-def _document(files: dict[str, bytes], name: str) -> dict[str, Any]:
+def _document(files: dict[str, bytes], name: str, *, require_canonical: bool = True) -> dict[str, Any]:
     with _reading(name):
-        document = canonical.parse(files[name], require_canonical=True)
+        document = canonical.parse(files[name], require_canonical=require_canonical)
     if not isinstance(document, dict):
         raise ProofError(f"{name} is not a JSON object", code="bad-document")
     return document

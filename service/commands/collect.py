@@ -8,7 +8,18 @@ from typing import Any
 
 from extractor.errors import InputError, ProofError
 from service.client import FINAL_STATES, Client, ServiceProblem
-from service.commands.common import DONE, REFUSED, Progress, add_command, emit, note, read_bytes, rows, write_file
+from service.commands.common import (
+    DONE,
+    REFUSED,
+    Progress,
+    add_command,
+    emit,
+    note,
+    read_bytes,
+    read_json,
+    rows,
+    write_file,
+)
 from service.commands.remote import add_service_options, client_of
 
 
@@ -45,6 +56,7 @@ def collect(args: argparse.Namespace) -> int:
         note(f"the run failed: {run['message']}")
         return REFUSED
     out = Path(args.out)
+    _check_folder(out, run["id"])
     out.mkdir(parents=True, exist_ok=True)
     files: dict[str, str] = {}
 
@@ -77,6 +89,17 @@ def collect(args: argparse.Namespace) -> int:
     if run["state"] in ("collected", "erased") and not (out / "bits.bin").exists():
         note("the bits were collected before; only the audit documents were fetched")
     return REFUSED if run["state"] == "refused" else DONE
+
+
+def _check_folder(out: Path, run_id: str) -> None:
+    """Refuse a folder with the files of another run: its bits may be the only copy there is."""
+    if (out / "report.json").exists():
+        report = read_json(out / "report.json")
+        if isinstance(report, dict) and report.get("run") == run_id:
+            return
+    elif not (out / "bits.bin").exists():
+        return
+    raise InputError("holds the files of another run; choose another folder", code="folder-taken", file=str(out))
 
 
 def _fetch_bits(client: Client, run: dict, out: Path, size: int, files: dict[str, str]) -> tuple[bytes, str]:

@@ -224,8 +224,9 @@ class Progress:
         if sys.stderr.isatty():
             from tqdm import tqdm
 
+            # The size is given, as some terminals say 0 x 0 and would get no bar at all.
             self._bar = tqdm(
-                total=total, desc=label, unit=unit, unit_scale=True, ncols=WIDTH - 1, leave=True, file=sys.stderr
+                total=total, desc=label, unit=unit, unit_scale=True, ncols=WIDTH - 1, nrows=24, file=sys.stderr
             )
 
     def advance(self, amount: int) -> None:

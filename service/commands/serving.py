@@ -11,8 +11,7 @@ from contextlib import contextmanager
 from typing import Any
 
 from extractor.errors import InputError
-from service.commands.common import BAD_INPUT, DONE, Parser, add_command, emit, note, real, rows, whole
-from service.errors import StorageFailed, Unavailable
+from service.commands.common import DONE, Parser, add_command, emit, note, real, rows, whole
 
 SCOPES = {
     "submit": "declare, upload, seal",
@@ -153,7 +152,7 @@ def serve(args: argparse.Namespace) -> int:
         note(f"data in {settings.data.resolve()}, {workers}; stop with Ctrl-C")
         note(f"a token: bellassay token create NAME --data {settings.data}")
 
-    return _operator_acts(lambda: run_service(settings, on_listening=listening))
+    return run_service(settings, on_listening=listening)
 
 
 def work(args: argparse.Namespace) -> int:
@@ -164,22 +163,10 @@ def work(args: argparse.Namespace) -> int:
     if not args.once:
         note(f"working on {settings.data.resolve()}; stop with Ctrl-C")
 
-    def run() -> int:
-        done = run_worker(settings, once=args.once)
-        if args.once:
-            note(f"worked on {done} run{'' if done == 1 else 's'}")
-        return DONE
-
-    return _operator_acts(run)
-
-
-def _operator_acts(run: Any) -> int:
-    """Run something long; trouble of disk or database is a sentence for the operator."""
-    try:
-        return run()
-    except (Unavailable, StorageFailed) as fault:
-        note(f"bellassay: {fault}")
-        return BAD_INPUT
+    done = run_worker(settings, once=args.once)
+    if args.once:
+        note(f"worked on {done} run{'' if done == 1 else 's'}")
+    return DONE
 
 
 @contextmanager

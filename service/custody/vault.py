@@ -43,6 +43,7 @@ from service.store.durable import storage_errors, sync_file, sync_folder, tempor
 
 MAGIC = b"bellassay vault1"
 SEGMENT_BYTES = 2**20
+HELD_SEGMENTS = 8            # plaintext segments a reader keeps: five planes, a directory and some room
 TAG_BYTES = 16
 KEY_BYTES = 32
 NAME_BYTES = 255
@@ -158,14 +159,17 @@ class VaultWriter:
 
 
 class VaultReader(io.RawIOBase):
-    """The plaintext as a seekable binary file: `read`, `readinto`, `seek`, `tell`; `size` bytes. One segment in memory.
+    """The plaintext as a seekable binary file: `read`, `readinto`, `seek`, `tell`; `size` bytes.
+
+    The segments read last, HELD_SEGMENTS at most, stay in memory: an archive of planes is read at several places in turn.
 
     Wrap it in `io.BufferedReader` where line reading is wanted (`open_vault` does). Not for several threads at once.
     Errors raised, on opening or reading: DamagedFile; FileNotFoundError if there is no such file.
     """
 
     def __init__(self, path: Path, run_key: bytes, name: str) -> None:
-        self._path, self._plain = path, b""
+        self._path = path
+        self._held: dict[int, bytes] = {}
         self._file = open(path, "rb", buffering=0)
         super().__init__()
         try:
@@ -184,8 +188,8 @@ class VaultReader(io.RawIOBase):
             least = (self._segments - 1) * SEGMENT_BYTES + (self._segments > 1)
             if self.size < least or self._segments > _SEGMENTS_LIMIT:
                 raise self._damaged("has an impossible length")
-            self._position, self._held, self._plain = 0, -1, b""
-            self._load(self._segments - 1)        # proves the length before anything is handed out
+            self._position = 0
+            self._segment(self._segments - 1)     # proves the length before anything is handed out
         except BaseException:
             self.close()
             raise
@@ -215,8 +219,7 @@ class VaultReader(io.RawIOBase):
         done = 0
         while done < wanted:
             number, offset = divmod(self._position, SEGMENT_BYTES)
-            self._load(number)
-            piece = memoryview(self._plain)[offset:offset + wanted - done]
+            piece = memoryview(self._segment(number))[offset:offset + wanted - done]
             view[done:done + len(piece)] = piece
             done += len(piece)
             self._position += len(piece)
@@ -224,23 +227,27 @@ class VaultReader(io.RawIOBase):
 
     def close(self) -> None:
         if not self.closed and hasattr(self, "_file"):      # not there if opening failed
-            self._plain = b""
+            self._held.clear()
             self._file.close()
         super().close()
 
-    def _load(self, number: int) -> None:
-        if number == self._held:
-            return
+    def _segment(self, number: int) -> bytes:
+        """Plaintext of a segment. Errors raised: DamagedFile."""
+        if number in self._held:
+            self._held[number] = plain = self._held.pop(number)       # most recently used last
+            return plain
         last = number == self._segments - 1
         length = self.size - number * SEGMENT_BYTES + TAG_BYTES if last else _SEALED_BYTES
         with storage_errors(self._path):
             sealed = os.pread(self._file.fileno(), length, self._start + number * _SEALED_BYTES)
         try:
-            self._plain = self._cipher.decrypt(_nonce(self._prefix, number, last), sealed, None)
+            plain = self._cipher.decrypt(_nonce(self._prefix, number, last), sealed, None)
         except (InvalidTag, ValueError):
-            self._held = -1
             raise self._damaged(f"does not authenticate in segment {number + 1} of {self._segments}") from None
-        self._held = number
+        while len(self._held) >= HELD_SEGMENTS:
+            del self._held[next(iter(self._held))]
+        self._held[number] = plain
+        return plain
 
     def _damaged(self, what: str) -> DamagedFile:
         return DamagedFile(

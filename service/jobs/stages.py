@@ -8,8 +8,8 @@ on, so no bits are ever made from two seeds; bits can be fetched only after publ
 from __future__ import annotations
 
 import hashlib
+import hmac
 import os
-import secrets
 from collections.abc import Callable, Iterator
 
 from extractor import pipeline
@@ -23,7 +23,7 @@ from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, read_planes, reb
 from extractor.seal import canonical
 from extractor.seal.entries import certificate_commitment
 from extractor.tally import tally_batch
-from service.collection import SALT_BYTES, store_bits
+from service.collection import store_bits
 from service.custody.vault import VaultWriter, open_vault, read_vault, write_vault
 from service.errors import DamagedFile
 from service.jobs.publishing import certificate_of, publish
@@ -152,7 +152,8 @@ def hash_rounds(work: Work, row: RunRow) -> None:
                 threads=settings.hash_threads or os.cpu_count() or 1)
     except FileNotFoundError:
         raise DamagedFile("the stored seed is missing", code="seed-missing") from None
-    salt = secrets.token_bytes(SALT_BYTES)
+    # From the run's key, not drawn: a worker that lost its lease unawares writes the same file, not another salt.
+    salt = hmac.digest(key, b"bellassay bits salt 1", "sha256")
     parts.blobs.need(len(bits))
     store_bits(parts, row.id, bits, salt, hashlib.sha256(bits).digest())
     work.advance(row, "publish", {"bits_commitment": canonical.commitment(salt, bits), "backend": pipeline.backend_name(),

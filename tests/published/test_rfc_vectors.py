@@ -15,6 +15,7 @@ import pytest
 from extractor.errors import InputError, ProofError
 from extractor.seal import canonical, merkle
 from extractor.seal.note import Signer, Verifier
+from service.transport import digest_field
 
 # RFC 8032 section 7.1, TEST 1 to 3 (from memory, recomputed): private key, public key, message, signature.
 ED25519 = [
@@ -159,7 +160,8 @@ def test_keys_are_sorted_by_utf_16_units_as_in_rfc_8785_section_3_2_3() -> None:
     (b'{"hello": "world"}', "X48E9qOokqqrvdts8nOJRJN3OWDUoyWxBf7kbu9DBPE="),
 ])
 def test_digests_are_those_of_rfc_9530(body, encoded) -> None:
-    """The sha-256 of the example body is, in hexadecimal, our digest text."""
+    """The sha-256 of the example body is, in hexadecimal, our digest text, and in base64 the header field we send."""
+    assert digest_field(hashlib.sha256(body).digest()) == f"sha-256=:{encoded}:"
     assert canonical.bytes_digest(body) == f"sha256:{base64.b64decode(encoded).hex()}"
 
 

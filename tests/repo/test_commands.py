@@ -76,6 +76,16 @@ def test_every_command_with_a_result_has_json(name: str) -> None:
         assert any("--json" in action.option_strings for action in LEAVES[name]._actions)
 
 
+def test_the_command_lines_of_the_readme_parse() -> None:
+    """Every indented line of the README that calls bellassay is one the parser takes, continuation lines included."""
+    readme = ROOT / "README.md"
+    text = readme.read_text(encoding="utf-8") if readme.exists() else ""
+    lines = re.findall(r"^    (bellassay .*)$", re.sub(r"\\\n *", " ", text), re.MULTILINE)
+    for line in lines:
+        words = [word.strip('"') for word in re.findall(r'"[^"]*"|\S+', re.split(r"\s+#|\s>\s", line)[0])]
+        build_parser().parse_args(words[1:])
+
+
 def test_options_with_a_unit_say_it() -> None:
     """The text of an option that takes bits, probabilities, seconds or an angle names what it takes."""
     units = {"BITS": "bit|0 or 1", "RAD": "radian", "DAYS": "day", "G": "probability", "E": "error", "W": "probability"}

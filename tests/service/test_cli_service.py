@@ -227,6 +227,30 @@ def test_an_uploaded_seed_is_sent_when_its_length_is_known(lab: Lab, run, tmp_pa
     assert (tmp_path / "out/seed.bin").read_bytes() == seed.read_bytes()
 
 
+def test_a_folder_with_another_run_is_not_overwritten(lab: Lab, run, tmp_path: Path) -> None:
+    """The bits of a collected run exist only once: collecting another run into their folder is refused."""
+    ids = []
+    for name in ("first", "second"):
+        code, out, err = run("submit", *lab.files, "--declaration", lab.declaration(name), "--watch", "--json")
+        assert code == 0, err
+        ids.append(json.loads(out)["id"])
+    assert run("collect", ids[0], "--out", tmp_path)[0] == 0
+    before = {path.name: path.read_bytes() for path in tmp_path.iterdir()}
+    code, _, err = run("collect", ids[1], "--out", tmp_path)
+    assert (
+        code == 2 and "another run" in err and before == {path.name: path.read_bytes() for path in tmp_path.iterdir()}
+    )
+    assert lab.client.run(ids[1])["state"] == "certified"
+
+
+def test_the_service_plans_like_the_command(lab: Lab, run) -> None:
+    """POST /v1/plan and `bellassay plan` give the same numbers."""
+    code, out, _ = run("plan", "--rounds", ROUNDS, "--score", 0.84, "--soundness", 1e-6, "--json")
+    planned = lab.client.plan(rounds=ROUNDS, score=0.84, soundness=1e-6)
+    here = {plan["method"]: plan["certified_length"] for plan in json.loads(out)["plans"]}
+    assert here == {plan["method"]: plan["certified_length"] for plan in planned["plans"]} and code == 0
+
+
 def test_the_certificate_is_the_same_with_and_without_a_service(lab: Lab, run, tmp_path: Path) -> None:
     """Same declaration, rounds and seed: the same bytes of certificate and bits from certify and from the service."""
     declaration = lab.declaration("same")

@@ -17,7 +17,8 @@ from extractor import pipeline
 from extractor.bell.rigs import optimal_rig, simulate
 from extractor.documents import certificate_document, declaration_document
 from extractor.hashing.toeplitz import SeedBytes
-from extractor.model import Certificate, Declaration
+from extractor.model import Certificate, Declaration, RoundBatch
+from extractor.records.bits import slice_bits
 from extractor.records.planes import digest_of, rebatch
 from extractor.records.writers import write_csv, write_npz
 from extractor.seal import bundle, canonical, checkpoint, entries, merkle, note, report
@@ -151,10 +152,10 @@ def run(declaration: Declaration, split: tuple[int, ...], visibility: float = 1.
         after: tuple[str, ...] = ()) -> Run:
     """Simulate rounds in segments of the sizes in `split` (NPZ and CSV in turn), certify, extract."""
     rig = optimal_rig(visibility=visibility) if visibility < 1 else optimal_rig()
-    batches = list(rebatch(simulate(rig, sum(split), seed), 1))
+    whole, = rebatch(simulate(rig, sum(split), seed))
     segments, described, at = [], [], 0
     for number, size in enumerate(split, 1):
-        part = list(rebatch(iter(batches[at:at + size]), size))
+        part = [RoundBatch(size, {name: slice_bits(plane, at, size) for name, plane in whole.planes.items()})]
         at += size
         target = io.BytesIO()
         (write_npz if number % 2 else write_csv)(target, iter(part))
@@ -164,7 +165,7 @@ def run(declaration: Declaration, split: tuple[int, ...], visibility: float = 1.
             "segment": number, "digest": canonical.bytes_digest(data), "bytes": len(data),
             "format": "npz" if number % 2 else "csv", "rounds": size, "no_clicks": (0, 0),
             "planes_digest": digest_of(iter(part)), "first_round": None, "tally": "left out of reports"})
-    tally, digest = pipeline.read_run(rebatch(iter(batches)))
+    tally, digest = pipeline.read_run([whole])
     certificate = pipeline.certify(declaration, tally)
     score, diagnostics = pipeline.look(declaration, tally)
     made = Run("run-41", declaration, certificate, tuple(segments),
@@ -173,7 +174,7 @@ def run(declaration: Declaration, split: tuple[int, ...], visibility: float = 1.
     if certificate.outcome == "refused":
         return made
     seed_bytes = uniform(certificate.seed_bits, b"seed")
-    bits = pipeline.extract(declaration, certificate, lambda first: rebatch(iter(batches)),
+    bits = pipeline.extract(declaration, certificate, lambda first: [whole],
                             SeedBytes(seed_bytes, certificate.seed_bits))
     return replace(made, seed=seed_bytes, bits=bits)
 

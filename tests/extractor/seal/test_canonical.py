@@ -20,7 +20,7 @@ VALUES = st.recursive(
     max_leaves=12)
 
 
-@settings(max_examples=300, deadline=None, derandomize=True)
+@settings(max_examples=150, deadline=None, derandomize=True)
 @given(VALUES)
 def test_what_is_written_is_read_back_and_written_alike(value) -> None:
     """Every JSON value survives the round trip, and its bytes are a fixed point."""
