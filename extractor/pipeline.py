@@ -16,34 +16,62 @@ from extractor import tally as tallying
 from extractor.bell.diagnostics import Diagnostic, diagnose
 from extractor.bell.score import Score, score
 from extractor.documents import tally_counts
-from extractor.entropy import bound, planning
+from extractor.entropy import behaviours, bound, planning
 from extractor.errors import Defect, InputError
 from extractor.hashing.toeplitz import SeedReader, ToeplitzStream, find_backend
-from extractor.model import Certificate, Declaration, RoundBatch, RoundRules, Tally
+from extractor.model import Certificate, Convention, Declaration, RoundBatch, RoundRules, Tally
 from extractor.records.planes import BLOCK_ROUNDS, PlaneDigest, rebatch
 from extractor.records.rounds import open_rounds
 from extractor.seal import canonical
 
 check_declaration = bound.check_declaration
 certify = bound.certify
-plan = planning.plan
-compare = planning.compare
-rounds_for = planning.rounds_for
 
 
-def declare(*, calibration: Tally | None = None, score: float | None = None, **arguments) -> Declaration:
-    """A declaration for a rig known by a calibration tally or an expected winning probability (exactly one of the two).
+def plan(**expectation_and_arguments) -> planning.Plan:
+    """The expected outcome of a run. One of score, calibration (Tally) or rig (`bell.rigs`) says what to expect; else as `entropy.planning.plan`."""
+    return planning.plan(**_expectation(expectation_and_arguments))
+
+
+def compare(**expectation_and_arguments) -> list[planning.Plan | InputError]:
+    """A plan per method, or the InputError that says why it does not apply; arguments as `plan` without method."""
+    return planning.compare(**_expectation(expectation_and_arguments))
+
+
+def rounds_for(length: int, **expectation_and_arguments) -> int:
+    """Fewest rounds whose expected certified length reaches `length` bits; arguments as `plan`, without rounds."""
+    return planning.rounds_for(length, **_expectation(expectation_and_arguments))
+
+
+def declare(*, calibration: Tally | None = None, **arguments) -> Declaration:
+    """A declaration for a rig known by a calibration tally, a modelled rig or an expected winning probability (exactly one of them).
 
     The calibration's digest goes into the declaration. Arguments and errors otherwise as `entropy.planning.declare`.
     """
-    if (calibration is None) == (score is None):
-        raise InputError("give either a calibration tally or a score", code="bad-usage", field="/score")
-    if calibration is None:
-        return planning.declare(score=score, **arguments)
-    known = {"convention": arguments["convention"]} if "convention" in arguments else {}
-    return planning.declare(
-        score=planning.score_of(calibration, **known), calibration_digest=canonical.digest(tally_counts(calibration)),
-        calibration_rounds=calibration.rounds, **arguments)
+    if calibration is not None:
+        arguments |= {"calibration_digest": canonical.digest(tally_counts(calibration)), "calibration_rounds": calibration.rounds}
+    name = arguments.pop("rig")
+    model = arguments.pop("rig_model", None)
+    expected = _expectation(arguments | {"calibration": calibration, "rig": model})
+    return planning.declare(rig=name, **expected)
+
+
+def _expectation(arguments: dict) -> dict:
+    """The arguments with score, calibration or rig turned into what planning takes: score and, for factor-table, behaviour."""
+    arguments = dict(arguments)
+    calibration, rig = arguments.pop("calibration", None), arguments.pop("rig", None)
+    if sum(value is not None for value in (calibration, rig, arguments.get("score"))) != 1:
+        raise InputError("give exactly one of a score, a calibration tally and a modelled rig", code="bad-usage", field="/score")
+    convention = arguments.get("convention", Convention())
+    if calibration is not None:
+        arguments["score"] = planning.score_of(calibration, convention)
+        if arguments.get("method") in (None, "factor-table"):
+            arguments["behaviour"] = tuple(behaviours.of_tally(calibration).reshape(-1).tolist())
+    elif rig is not None:
+        tests = rig.cell_probabilities()[1]
+        behaviour = tests / tests.sum(axis=(2, 3), keepdims=True)
+        arguments["score"], arguments["behaviour"] = rig.winning_probability, tuple(behaviour.reshape(-1).tolist())
+    return arguments
 
 
 def batches_of(files: Iterable[tuple[BinaryIO, str]], rules: RoundRules) -> Iterator[RoundBatch]:

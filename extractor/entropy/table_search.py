@@ -11,16 +11,16 @@ direction, so that cells of probability 1e-8 and 1/4 are treated alike.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
 from extractor.entropy import two_sided
-from extractor.entropy.search import best_in_log
 from extractor.entropy.two_sided import Problem
 
 LN2 = math.log(2)
-_BASE = 24                       # places per side of the search grid
+_BASE = 16                       # places per side of the search grid
 
 
 @dataclass
@@ -110,17 +110,12 @@ def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float, least: float
         if gap * m < accuracy and np.max(np.abs(primal)) < accuracy and np.max(np.abs(dual) * factors) < 1e-10:
             break
         scaled = rows * (factors / root)                       # rows in the scale y = root * dF/F
-        k = np.zeros((len(nu) + m, len(nu) + m))
-        k[:len(nu), :len(nu)] = np.eye(len(nu))
-        k[:len(nu), len(nu):], k[len(nu):, :len(nu)] = scaled.T, scaled
-        k[range(len(nu), len(nu) + m), range(len(nu), len(nu) + m)] = -slack / multipliers
+        solve = _newton(scaled, slack / multipliers)
 
         def step(tau: float, corrections: np.ndarray | float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
             target = (tau - corrections) / multipliers          # new slack, to first order, before the change of multipliers
-            right = np.concatenate([dual * factors / root, primal + slack - target])
-            both = np.linalg.solve(k, right)
-            d_multipliers = both[len(nu):]
-            return both[:len(nu)] * factors / root, target - slack - slack / multipliers * d_multipliers, d_multipliers
+            y, d_multipliers = solve(dual * factors / root, primal + slack - target)
+            return y * factors / root, target - slack - slack / multipliers * d_multipliers, d_multipliers
 
         def longest(d_f: np.ndarray, d_s: np.ndarray, d_l: np.ndarray) -> float:
             ratios = np.concatenate([d_f / factors, d_s / slack, d_l / multipliers])
@@ -139,6 +134,26 @@ def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float, least: float
     return factors / max(1.0, float(np.max(rows[:strategies] @ factors))), multipliers[:strategies]
 
 
+def _newton(rows: np.ndarray, ratios: np.ndarray) -> Callable[[np.ndarray, np.ndarray], tuple[np.ndarray, np.ndarray]]:
+    """Solver of y + rows^T l = top, rows y - ratios l = bottom: whole if small, else through y alone (a little less exact)."""
+    n, m = rows.shape[1], len(rows)
+    if m <= 250:
+        k = np.zeros((n + m, n + m))
+        k[:n, :n], k[:n, n:], k[n:, :n] = np.eye(n), rows.T, rows
+        k[range(n, n + m), range(n, n + m)] = -ratios
+
+        def whole(top: np.ndarray, bottom: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+            both = np.linalg.solve(k, np.concatenate([top, bottom]))
+            return both[:n], both[n:]
+        return whole
+    normal = np.eye(n) + rows.T @ (rows / ratios[:, None])
+
+    def reduced(top: np.ndarray, bottom: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        y = np.linalg.solve(normal, top + rows.T @ (bottom / ratios))
+        return y, (rows @ y - bottom) / ratios
+    return reduced
+
+
 class Oracle:
     """Finds strategies that exceed a table, warm from call to call."""
 
@@ -148,7 +163,7 @@ class Oracle:
         self.p, self.v = two_sided.flat_states(self.angles.shape[1])
         self.steps = 25
 
-    def worst(self, problem: Problem, count: int = 10) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    def worst(self, problem: Problem, count: int = 8) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
         """(values, p, v, angles) of up to `count` local maxima, moved uphill."""
         values = np.empty(self.angles.shape[1])
         for begin in range(0, len(values), 320):
@@ -172,11 +187,11 @@ def _climb(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray, s
 
 
 def _refined(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """Moves each strategy's angles uphill: a 3 by 3 stencil, its quadratic fit, and a third of the step, eight times."""
+    """Moves each strategy's angles uphill: a 3 by 3 stencil, its quadratic fit, and a third of the step, seven times."""
     n, h = angles.shape[1], 0.5 / _BASE
     offsets = np.array([(di, dj) for di in (-1, 0, 1) for dj in (-1, 0, 1)], dtype=float).T           # (2, 9)
     values = np.full(n, -np.inf)
-    for _ in range(8):
+    for _ in range(7):
         centre = np.clip(angles, 0, 1)
         places = np.clip(centre[:, :, None] + h * offsets[:, None, :], 0, 1).reshape(2, -1)
         p9, v9, g = _climb(problem, np.repeat(p, 9, 1), np.repeat(v, 9, 2), places, 6)
@@ -247,10 +262,23 @@ class Search:
             factors, gain = self.fit(e)
         return factors, gain
 
-    def best_excess(self, rounds: int, cost: float) -> float:
-        """e = order - 1 that makes rounds * gain - cost/e largest under the strategies known so far."""
-        low = min(max(cost / (2.5 * rounds), 1e-8), 0.9)
-        return best_in_log(lambda e: rounds * self.fit(e)[1] - cost / e, low, 1.0, points=17)
+    def best_excess(self, rounds: int, cost: float, near: float | None) -> float:
+        """e = order - 1 that makes rounds * gain - cost/e largest under the strategies known so far, to a few per cent.
+
+        A grid in ln e (around `near`, if given), and the vertex of the parabola through its best three points.
+        """
+        low, high = min(max(cost / (2.5 * rounds), 1e-8), 0.9), 1.0
+        points = 13
+        if near is not None:
+            low, high, points = max(low, near / 3), min(high, near * 3), 7
+        grid = np.exp(np.linspace(math.log(low), math.log(high), points))
+        values = [rounds * self.fit(e)[1] - cost / e for e in grid]
+        k = int(np.argmax(values))
+        if not 0 < k < points - 1:
+            return float(grid[k])
+        left, middle, right = values[k - 1:k + 2]
+        shift = 0.5 * (left - right) / (left - 2 * middle + right) if left + right < 2 * middle else 0.0
+        return float(grid[k] * (grid[1] / grid[0]) ** shift)
 
 
 def best_table(search: Search, rounds: int, cost: float, order: float | None, relative: float = 1e-3) -> tuple[float, np.ndarray, float]:
@@ -259,9 +287,11 @@ def best_table(search: Search, rounds: int, cost: float, order: float | None, re
         e = order - 1
         return e, *search.improve(e, 20, relative)
     e = min(max(math.sqrt(cost / rounds), 1e-7), 0.5)
+    near = None
     for _ in range(8):
-        search.improve(e, 4, relative)
-        before, e = e, search.best_excess(rounds, cost)
-        if abs(math.log(e / before)) < 0.05:
+        search.improve(e, 3, relative)
+        before, e = e, search.best_excess(rounds, cost, near)
+        if near is not None and abs(math.log(e / before)) < 0.1:
             break
+        near = e
     return e, *search.improve(e, 20, relative)

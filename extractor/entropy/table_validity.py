@@ -53,14 +53,24 @@ def _excess(credit: float, e: Decimal) -> Decimal:
     return (exp2(exponent) - 1) / e
 
 
-def check_valid(table: ScoreTable, settings: Settings) -> None:
-    """Raise InputError unless no quantum strategy makes the table's weighted sum exceed 1 under any allowed settings distribution."""
-    if not _is_valid(table, settings):
+def check_valid(table: ScoreTable, settings: Settings) -> float:
+    """Upper bound, at most 0, on the excess (sum - 1)/(order - 1) of the table over all quantum strategies and allowed settings distributions.
+
+    Raises InputError if it could not be shown to be at most 0.
+    """
+    bound = _bound(table, settings)
+    if not bound <= 0.0:
         raise InputError(
             "the table could not be shown to be valid: some quantum strategy may earn more than it is worth; make the table with plan or declare, or "
             "lower its credits", code="table-not-valid", field="/table")
+    return bound
 
 
 @lru_cache(maxsize=256)
-def _is_valid(table: ScoreTable, settings: Settings) -> bool:
-    return all(two_sided_grid.excess_bound(problem, target=0.0).bound <= 0.0 for problem in problems(table, settings))
+def _bound(table: ScoreTable, settings: Settings) -> float:
+    worst = -float("inf")
+    for problem in problems(table, settings):
+        worst = max(worst, two_sided_grid.excess_bound(problem, target=0.0).bound)
+        if worst > 0.0:
+            break
+    return worst
