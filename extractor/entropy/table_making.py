@@ -133,9 +133,13 @@ def searched_length(behaviour: Behaviour, settings: Settings, rounds: int, sound
     """About the bits that `rounds` rounds would earn after the cost of soundness; quick after the first call. For planning."""
     search = _search(behaviour, settings, 40)
     cost = -math.log2(soundness)
-    e = order - 1 if order is not None else search.best_excess(rounds, cost, search.best_excess(rounds, cost, None))
-    gain = search.improve(e, 2, 2e-3)[1]
-    return rounds * gain * (1 - _SLACK_SHARE) - cost * (1 + e) / e + 2
+    for _ in range(8):
+        e = order - 1 if order is not None else search.best_excess(rounds, cost)
+        if any(abs(math.log(e / known)) < 0.15 for known in search.settled):
+            break
+        search.improve(e, 20, 2e-3)
+        search.settled.append(e)
+    return rounds * search.fit(e)[1] * (1 - _SLACK_SHARE) - cost * (1 + e) / e + 2
 
 
 def expected_counts(behaviour: Behaviour, settings: Settings, rounds: int) -> list[int]:

@@ -12,11 +12,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from extractor.entropy import two_sided
+from extractor.entropy.search import best_in_log
 from extractor.entropy.two_sided import Problem
 
 LN2 = math.log(2)
@@ -219,6 +220,7 @@ class Search:
 
     nu           expected frequencies of the 16 test cells [x, y, a, b] and, if there are generation rounds, 4 more
     lowest       lowest credit of a cell, in bits
+    settled      orders (minus 1) at which the strategies are known to suffice
     """
 
     nu: np.ndarray
@@ -227,6 +229,7 @@ class Search:
     pool: Strategies
     oracle: Oracle
     turn: int = 0
+    settled: list[float] = field(default_factory=list)
 
     @classmethod
     def of(cls, nu: np.ndarray, layout: Layout, lowest: float) -> Search:
@@ -236,7 +239,7 @@ class Search:
         """(F, gain in bits per round) under the strategies known so far."""
         powers = np.concatenate([deterministic(), self.pool.powers(1 + e)])
         rows = self.layout.rows(powers)
-        factors, multipliers = best_factors(self.nu, rows, 1e-6 * e, 2.0 ** (self.lowest * e))
+        factors, multipliers = best_factors(self.nu, rows, 1e-7 * e, 2.0 ** (self.lowest * e))
         weights = multipliers.reshape(len(powers), -1).sum(axis=1)[16:]
         if len(weights) > keep:
             self.pool = self.pool.kept(np.argsort(-weights)[:keep])
@@ -262,23 +265,10 @@ class Search:
             factors, gain = self.fit(e)
         return factors, gain
 
-    def best_excess(self, rounds: int, cost: float, near: float | None) -> float:
-        """e = order - 1 that makes rounds * gain - cost/e largest under the strategies known so far, to a few per cent.
-
-        A grid in ln e (around `near`, if given), and the vertex of the parabola through its best three points.
-        """
-        low, high = min(max(cost / (2.5 * rounds), 1e-8), 0.9), 1.0
-        points = 13
-        if near is not None:
-            low, high, points = max(low, near / 3), min(high, near * 3), 7
-        grid = np.exp(np.linspace(math.log(low), math.log(high), points))
-        values = [rounds * self.fit(e)[1] - cost / e for e in grid]
-        k = int(np.argmax(values))
-        if not 0 < k < points - 1:
-            return float(grid[k])
-        left, middle, right = values[k - 1:k + 2]
-        shift = 0.5 * (left - right) / (left - 2 * middle + right) if left + right < 2 * middle else 0.0
-        return float(grid[k] * (grid[1] / grid[0]) ** shift)
+    def best_excess(self, rounds: int, cost: float) -> float:
+        """e = order - 1 that makes rounds * gain - cost/e largest under the strategies known so far."""
+        low = min(max(cost / (2.5 * rounds), 1e-8), 0.9)
+        return best_in_log(lambda e: rounds * self.fit(e)[1] - cost / e, low, 1.0, points=15)
 
 
 def best_table(search: Search, rounds: int, cost: float, order: float | None, relative: float = 1e-3) -> tuple[float, np.ndarray, float]:
@@ -287,11 +277,9 @@ def best_table(search: Search, rounds: int, cost: float, order: float | None, re
         e = order - 1
         return e, *search.improve(e, 20, relative)
     e = min(max(math.sqrt(cost / rounds), 1e-7), 0.5)
-    near = None
     for _ in range(8):
         search.improve(e, 3, relative)
-        before, e = e, search.best_excess(rounds, cost, near)
-        if near is not None and abs(math.log(e / before)) < 0.1:
+        before, e = e, search.best_excess(rounds, cost)
+        if abs(math.log(e / before)) < 0.1:
             break
-        near = e
     return e, *search.improve(e, 20, relative)
