@@ -32,7 +32,8 @@ def open_parts(settings: ServiceSettings) -> Parts:
     keys = RunKeys.open(blobs.runs, settings.master_key_path)
     store = open_store(settings)
     try:
-        ledger = Ledger.open(store, key_path=settings.ledger_key_path, origin=settings.ledger_origin, copy_path=settings.checkpoint_path)
+        ledger = Ledger.open(store, key_path=settings.ledger_key_path, origin=settings.ledger_origin,
+                             copy_path=settings.checkpoint_path)
     except BaseException:
         store.close()
         raise

@@ -2,7 +2,8 @@
 
     certified ──confirm (digest agrees, ledger entry)──▶ collected ──key erased, ledger entry──▶ erased
 
-Whatever happens between the two arrows, `finish_erasures` (at every start, and by every idle worker) goes on from there.
+Whatever happens between the two arrows, `finish_erasures` (at every start, and by every idle worker) goes on from
+there.
 """
 
 from __future__ import annotations
@@ -126,7 +127,7 @@ def _already() -> Conflict:
 
 
 def erase(parts: Parts, run_id: str) -> None:
-    """Destroys the key of a collected run, then its encrypted files, then says so; may be repeated after an interruption."""
+    """Destroys the key of a collected run, then its encrypted files, then says so; may be repeated."""
     parts.keys.erase(run_id)
     parts.blobs.remove_secrets(run_id)
     with parts.store.write() as transaction:

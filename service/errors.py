@@ -63,7 +63,8 @@ class Conflict(Exception):
     retry_after_s  seconds after which trying again makes sense, None if it never does
     """
 
-    def __init__(self, message: str, *, code: str, errors: tuple[dict, ...] = (), retry_after_s: float | None = None) -> None:
+    def __init__(self, message: str, *, code: str, errors: tuple[dict, ...] = (),
+                 retry_after_s: float | None = None) -> None:
         self.message, self.code, self.errors, self.retry_after_s = message, code, errors, retry_after_s
         super().__init__(message)
 

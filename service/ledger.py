@@ -95,7 +95,7 @@ class Ledger:
         return self._signer
 
     def time(self, reading: Reading, now: str) -> str:
-        """`now`, but never before the newest entry: a clock that was set back must not make the log contradict itself."""
+        """`now`, but never before the newest entry: a clock set back must not make the log contradict itself."""
         head = reading.ledger_head()
         newest = reading.ledger_entry(head.size - 1) if head else None
         return now if newest is None else max(now, newest.time)

@@ -1,4 +1,4 @@
-"""What the halves of the service are handed: the opened store, ledger, keys and folders. `app.open_parts` joins them."""
+"""What the service's parts are handed: the opened store, ledger, keys and folders, joined by `app.open_parts`."""
 
 from __future__ import annotations
 

@@ -31,7 +31,8 @@ def seal(parts: Parts, run_id: str, segments: int, rounds: int) -> RunRow:
         _check(received, segments, rounds)
         now = parts.ledger.time(transaction, now_text())
         declaration = transaction.get_declaration(row.declaration_id)
-        states.move(transaction, row, "sealed", {"sealed_segments": segments, "sealed_rounds": rounds, "sealed_time": now})
+        states.move(transaction, row, "sealed", {"sealed_segments": segments, "sealed_rounds": rounds,
+                                                 "sealed_time": now})
         parts.ledger.append(transaction, "seal", run_id, {
             "declaration": declaration.digest, "segments": segments, "rounds": rounds,
             "records_commitment": records_commitment(row.ledger_salt, [one.planes_digest for one in received])}, now)
@@ -42,11 +43,13 @@ def _check(received: Sequence[SegmentRow], segments: int, rounds: int) -> None:
     numbers = {segment.number for segment in received}
     missing = [number for number in range(1, segments + 1) if number not in numbers]
     if missing:
-        named = ", ".join(map(str, missing[:NAMED])) + (f" and {len(missing) - NAMED} more" if len(missing) > NAMED else "")
-        raise Conflict(f"of {segments} segments {len(missing)} have not arrived: {named}", code="segments-missing", errors=tuple(
-            {"pointer": "/segments", "field": str(number), "detail": f"segment {number} has not arrived"} for number in missing[:NAMED]))
+        named = ", ".join(map(str, missing[:NAMED]))
+        more = f" and {len(missing) - NAMED} more" if len(missing) > NAMED else ""
+        raise Conflict(f"of {segments} segments {len(missing)} have not arrived: {named}{more}",
+                       code="segments-missing", errors=tuple(_missing(number) for number in missing[:NAMED]))
     if len(numbers) != segments:
-        raise Conflict(f"{len(numbers)} segments arrived, the highest is {max(numbers)}; the seal names {segments}", code="segments-differ",
+        raise Conflict(f"{len(numbers)} segments arrived, the highest is {max(numbers)}; the seal names {segments}",
+                       code="segments-differ",
                        errors=({"pointer": "/segments", "detail": f"{len(numbers)} arrived"},))
     total = sum(segment.rounds for segment in received)
     if total != rounds:
@@ -56,11 +59,16 @@ def _check(received: Sequence[SegmentRow], segments: int, rounds: int) -> None:
         _check_continuous(before, after)
 
 
+def _missing(number: int) -> dict[str, str]:
+    return {"pointer": "/segments", "field": str(number), "detail": f"segment {number} has not arrived"}
+
+
 def _check_continuous(before: SegmentRow, after: SegmentRow) -> None:
     """Round numbers, where both segments carry them, must run on."""
     if before.last_round is None or after.first_round is None or after.first_round == before.last_round + 1:
         return
     code = "missing-round" if after.first_round > before.last_round + 1 else "repeated-round"
-    detail = f"segment {after.number} starts with round {after.first_round}, segment {before.number} ended with round {before.last_round}"
+    detail = (f"segment {after.number} starts with round {after.first_round}, "
+              f"segment {before.number} ended with round {before.last_round}")
     raise Conflict(detail, code=code, errors=(
         {"pointer": "/segments", "detail": detail, "file": after.file_name, "row": 1, "field": "round"},))

@@ -25,6 +25,7 @@ import uvicorn
 
 from extractor.errors import InputError
 from service.app import create_app
+from service.connections import Connection
 from service.settings import PREFIX, ServiceSettings
 
 log = logging.getLogger("bellassay.supervisor")
@@ -88,7 +89,8 @@ class Supervisor:
 
 
 def _start_worker(settings: ServiceSettings) -> subprocess.Popen:
-    return subprocess.Popen([sys.executable, "-P", "-m", "service.jobs.worker", "--supervised"], stdin=subprocess.PIPE, stdout=sys.stderr,
+    return subprocess.Popen([sys.executable, "-P", "-m", "service.jobs.worker", "--supervised"], stdin=subprocess.PIPE,
+                            stdout=sys.stderr,
                             env=worker_environment(settings))
 
 
@@ -100,7 +102,7 @@ def worker_environment(settings: ServiceSettings) -> dict[str, str]:
         if value is not None:
             environ[PREFIX + item.name.upper()] = repr(value) if isinstance(value, float) else str(value)
     environ[PREFIX + "DATA"] = str(settings.data.resolve())
-    # The same program as this one, wherever it was started: never a folder "service" that happens to lie in the way (-P).
+    # The same program as this one: never a folder "service" that happens to lie where it is started (hence also -P).
     ours = str(Path(__file__).resolve().parents[1])
     environ["PYTHONPATH"] = os.pathsep.join([ours, *filter(None, [environ.get("PYTHONPATH")])])
     return environ
@@ -159,7 +161,8 @@ def _own_signals() -> dict[int, Any]:
 def make_server(app: object, settings: ServiceSettings) -> uvicorn.Server:
     """The HTTP server for the application, with its limits."""
     config = uvicorn.Config(
-        app, http="httptools", ws="none", lifespan="on", log_config=None, access_log=False, server_header=False, proxy_headers=False,
+        app, http=Connection, ws="none", lifespan="on", log_config=None, access_log=False, server_header=False,
+        proxy_headers=False,
         limit_concurrency=settings.connections, backlog=BACKLOG, timeout_keep_alive=KEEP_ALIVE_S,
         timeout_graceful_shutdown=max(1, int(settings.stop_s)))
     config.loaded_app_state = app.state         # type: ignore[attr-defined]
@@ -176,12 +179,12 @@ def _announce(server: uvicorn.Server, url: str, on_listening: Callable[[str], No
 def bind(host: str, port: int) -> socket.socket:
     """A listening socket. Errors raised: InputError with advice."""
     try:
-        # With the protocol named, the event loop switches off Nagle's algorithm, which would delay every small answer by 40 ms.
+        # With the protocol named, the event loop switches off Nagle's algorithm, which delays small answers by 40 ms.
         sock = socket.socket(socket.AF_INET6 if ":" in host else socket.AF_INET, socket.SOCK_STREAM, socket.IPPROTO_TCP)
         sock.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
         sock.bind((host, port))
         sock.listen(BACKLOG)
         return sock
     except OSError as fault:
-        raise InputError(f"cannot listen on {host} port {port}: {fault.strerror}; choose another --port, or stop what listens there",
-                         code="cannot-listen") from None
+        raise InputError(f"cannot listen on {host} port {port}: {fault.strerror}; choose another --port, or stop what "
+                         "listens there", code="cannot-listen") from None

@@ -1,11 +1,11 @@
-"""From a body on the wire to durable, counted rounds (or a seed), without ever holding it whole or in the clear on disk.
+"""From a body on the wire to durable, counted rounds (or a seed): never whole in memory, never in the clear on disk.
 
     pieces ──receive──▶ encrypted raw copy + SHA-256 ──take_segment──▶ canonical planes, digest, tally, row
                                                      └──take_seed────▶ seed, ledger entry, the waiting run goes on
 
 A body is first stored as it came, because only a whole body whose digest agrees may be read as rounds, and zip files
 need seeking. Everything that computes or touches the disk runs in the threads of `UploadRoom`, never on the event loop.
-What is acknowledged was synced before; two bodies for one place meet in one write transaction, where the first one wins.
+What is acknowledged was synced before; of two bodies for one place the first in the write transaction wins.
 """
 
 from __future__ import annotations
@@ -52,7 +52,8 @@ class UploadRoom:
     def place(self) -> Iterator[None]:
         """One place for the length of the block. Errors raised: Unavailable (code "too-many-uploads")."""
         if self.taken >= self._places:          # only the event loop comes here, so looking and taking cannot be parted
-            raise Unavailable(f"{self.taken} uploads are being received, no more at once", code="too-many-uploads", retry_after_s=1.0)
+            raise Unavailable(f"{self.taken} uploads are being received, no more at once", code="too-many-uploads",
+                              retry_after_s=1.0)
         self.taken += 1
         try:
             yield
@@ -104,7 +105,8 @@ class _Sink:
 
 
 @contextlib.asynccontextmanager
-async def receive(parts: Parts, room: UploadRoom, run_id: str, name: str, pieces: AsyncIterator[bytes], *, digest: bytes,
+async def receive(parts: Parts, room: UploadRoom, run_id: str, name: str, pieces: AsyncIterator[bytes], *,
+                  digest: bytes,
                   limit_bytes: int, announced_bytes: int | None) -> AsyncIterator[RawBody]:
     """Stores a body that must have the SHA-256 `digest`; it is removed again when the block ends.
 
@@ -113,7 +115,8 @@ async def receive(parts: Parts, room: UploadRoom, run_id: str, name: str, pieces
     Errors raised: BrokenTransfer; Unavailable (disk full); KeyErased; whatever `pieces` raises.
     """
     if announced_bytes is not None and announced_bytes > limit_bytes:
-        raise BrokenTransfer(f"{announced_bytes} bytes are announced, {limit_bytes} are accepted", code="upload-too-large")
+        raise BrokenTransfer(f"{announced_bytes} bytes are announced, {limit_bytes} are accepted",
+                             code="upload-too-large")
     parts.blobs.need(announced_bytes or 0)
     sink = await room.start(_Sink, parts, run_id, name)
     writing: asyncio.Future | None = None
@@ -135,16 +138,17 @@ async def receive(parts: Parts, room: UploadRoom, run_id: str, name: str, pieces
         writing = room.start(sink.finish)
         body = await writing
         if body.digest != digest:
-            raise BrokenTransfer(f"the {body.bytes} bytes that arrived do not have the digest in Content-Digest; send them again",
-                                 code="digest-mismatch")
+            raise BrokenTransfer(f"the {body.bytes} bytes that arrived do not have the digest in Content-Digest; "
+                                 "send them again", code="digest-mismatch")
         yield body
     finally:
-        if writing is not None and not writing.done():      # a cancelled request must not pull the file from under a thread
+        if writing is not None and not writing.done():      # no file is pulled from under a thread
             await asyncio.wait([writing])
         await room.start(sink.remove)
 
 
-def take_segment(parts: Parts, row: RunRow, declaration: Declaration, number: int, body: RawBody, file_name: str) -> tuple[SegmentRow, bool]:
+def take_segment(parts: Parts, row: RunRow, declaration: Declaration, number: int, body: RawBody,
+                 file_name: str) -> tuple[SegmentRow, bool]:
     """Reads, checks, packs and counts a received body and records it as segment `number`; (row, whether it is new).
 
     Errors raised: InputError (file, row and field at fault); Conflict "segment-differs", "run-sealed",
@@ -205,7 +209,7 @@ def _record(parts: Parts, made: SegmentRow, declared: int, packed: Path, final: 
         before = transaction.segment_totals([made.run_id])[made.run_id].rounds
         if before + made.rounds > declared:
             raise _too_many(declared, before, made.rounds)
-        # The name before the row: a row never promises a file that is not there. Without its row a file counts for nothing.
+        # The name before the row: a row never promises a file that is not there; a file without a row counts nothing.
         _rename(packed, final)
         transaction.insert_segment(made)
     return made, True
@@ -236,7 +240,8 @@ def seed_length(parts: Parts, row: RunRow) -> int:
         raise Conflict("the run is not sealed: a seed that is known before its rounds are fixed is worth nothing",
                        code="run-not-sealed")
     if row.seed_bits is None and row.state in ("sealed", "working"):
-        raise Conflict("the certificate is not made yet, so the length of the seed is not known", code="certificate-pending",
+        raise Conflict("the certificate is not made yet, so the length of the seed is not known",
+                       code="certificate-pending",
                        retry_after_s=parts.settings.poll_s)
     if not row.seed_bits:
         raise Conflict(f"the run is {row.state} and needs no seed", code="seed-not-needed")
@@ -263,7 +268,8 @@ def take_seed(parts: Parts, run_id: str, bits: int, body: RawBody) -> RunRow:
             if row is not None and row.seed_digest is not None:
                 return same_seed(row, digest)
             if row is None or row.state != "working" or row.stage != "seed" or row.waiting_for != "seed":
-                raise Conflict("the run does not wait for its seed just now; look at it again", code="run-busy", retry_after_s=1.0)
+                raise Conflict("the run does not wait for its seed just now; look at it again", code="run-busy",
+                               retry_after_s=1.0)
             _rename(sealed, final)
             states.record_seed(transaction, parts.ledger, row, "upload", digest)
             return transaction.get_run(run_id) or row

@@ -15,7 +15,6 @@ from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 import numpy as np
-from scipy import stats
 
 from extractor.bell.allowed import check_settings
 from extractor.bell.tails import as_p_value, log_at_least, log_at_most, log_chi_square_at_least, log_normal_at_least
@@ -252,6 +251,8 @@ def _log_two_proportions(ones: list[int], totals: list[int]) -> float:
         return 0.0
     if min(totals) * min(pooled, n - pooled) / n < _FEW:
         table = [ones, [totals[0] - ones[0], totals[1] - ones[1]]]
+        from scipy import stats     # late: rarely needed, and it doubles the time every command takes to start
+
         return math.log(max(float(stats.fisher_exact(table).pvalue), 1e-300))
     share = pooled / n
     error = math.sqrt(share * (1 - share) * (1 / totals[0] + 1 / totals[1]))

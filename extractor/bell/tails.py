@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 
-from scipy import special, stats
+from scipy import special
 
 SMALLEST = 2.2250738585072014e-308      # smallest normal float64; stands for anything smaller
 _DIRECT = 1e-280                        # above this the tail itself is a safe float
@@ -93,14 +93,14 @@ def as_log10(log: float) -> float:
 
 def log_normal_at_least(z: float) -> float:
     """ln P[standard normal >= z]."""
-    return float(stats.norm.logsf(z))
+    return float(special.log_ndtr(-z))
 
 
 def log_chi_square_at_least(value: float, degrees: int) -> float:
     """ln P[chi-square with `degrees` degrees of freedom >= value]; 0 without a degree of freedom."""
     if degrees < 1:
         return 0.0
-    tail = float(stats.chi2.sf(value, degrees))
+    tail = float(special.chdtrc(degrees, value))
     if tail > _DIRECT:
         return min(0.0, math.log(tail))
     # Chernoff: P <= exp(-(v - k)/2 + (k/2) ln(v/k)) for v > k

@@ -64,8 +64,8 @@ def certify(declaration: Declaration, tally: Tally) -> Certificate:
     _check_tally(declaration, tally)
     with exactly():
         account = _factor(declaration, tally) if declaration.method in FACTOR_METHODS else _accumulation(declaration, tally)
-        classes, why = lengths.class_bits(declaration)
-        terms = account.terms + (("classes", -classes, f"log2 of the number of cases that may become known: {why}", "MATH: classes add up by Hölder"),)
+        classes, why = lengths.class_bits(declaration, tally.rounds)
+        terms = account.terms + (("classes", -classes, f"cost of what becomes known besides the bits: {why}", "Hölder inequality over the classes, see lengths.class_bits"),)
         available = floor_bits(sum((bits for _, bits, _, _ in terms), ZERO))
         listed = tuple(Term(name, down(bits), meaning, source) for name, bits, meaning, source in terms)
     wanted = declaration.output_bits

@@ -7,7 +7,7 @@ from collections.abc import Callable
 from dataclasses import asdict, dataclass, replace
 from typing import Any
 
-from scipy import stats
+from scipy import special
 
 from extractor.errors import InputError
 from extractor.entropy import behaviours, bound, lengths, search, table_making, validity
@@ -91,11 +91,12 @@ def declare(*, rig: str, rounds: int, method: str, soundness: float, score: floa
     common = dict(rig=rig, rounds=rounds, method=method, soundness=soundness, settings=settings, convention=convention,
                   no_click=no_click, disclosure=disclosure, seed_source=seed_source, purpose=purpose, expected_score=score,
                   calibration_digest=calibration_digest, calibration_rounds=calibration_rounds)
+    behaviour = _behaviour(common, behaviour)
     draft, made = _checked_draft(common, output_rule, order, confidence, behaviour)
     if output_rule == "credit":
         return _with_length(draft, output_bits or 2 * rounds)
     if output_bits is None:
-        output_bits = _available(draft, _expected(draft, score, confidence)) if made is None else _reached(draft, made, confidence)
+        output_bits = _available(draft, _expected(draft, score, confidence)) if made is None else _reached(draft, made, behaviour, confidence)
         if output_bits < 1:
             raise InputError(
                 f"{method} would certify nothing with probability {confidence:g}: {rounds} rounds at winning probability {score:g} and "
@@ -111,25 +112,26 @@ def plan(*, rounds: int, score: float, soundness: float, method: str, settings: 
     does not cover."""
     common = dict(rig="plan", rounds=rounds, method=method, soundness=soundness, settings=settings, disclosure=disclosure,
                   expected_score=score, convention=convention)
+    behaviour = _behaviour(common, behaviour)
     draft, made = _checked_draft(common, output_rule, order, 0.5, behaviour)
     bound.check_declaration(draft)
     if made is None:
         expected = _expected(draft, score, 0.5)
     else:
-        expected = _table_tally(draft, behaviour or _of_score(score, convention))
+        expected = _table_tally(draft, behaviour)
     certificate = bound.certify(draft, expected)
     gain = certificate.terms[0].bits
     length = max(certificate.available_bits, 0)
     if output_rule == "credit":
         length = min(length, draft.output_bits)
     if made is not None:
-        reliable = _reached(draft, made, confidence)
+        reliable = _reached(draft, made, behaviour, confidence)
     else:
         reliable_draft = draft if method in FACTOR_METHODS else _checked_draft(common, output_rule, order, confidence, None)[0]
         reliable = _available(reliable_draft, _expected(reliable_draft, score, confidence))
     with exactly():
         limit = down(von_neumann(number(score))) if made is None else table_making.limit_rate(
-            behaviour or _of_score(score, convention), settings)
+            behaviour, settings)
     raw = 2 * rounds
     seed = raw + length - 1 if length else 0
     inputs = math.ceil(rounds * _settings_entropy(settings))
@@ -140,10 +142,11 @@ def plan(*, rounds: int, score: float, soundness: float, method: str, settings: 
         limit_fraction=length / (rounds * limit) if limit > 0 else 0.0, raw_bits=raw, seed_bits=seed,
         settings_bits=inputs, net_bits=length - inputs - seed,
         note="" if length else "nothing can be certified: more rounds or a higher score are needed",
-        **_outlook(draft, made, score, length))
+        **_outlook(draft, made, behaviour, score, length))
 
 
-def _outlook(draft: Declaration, made: table_making.MadeTable | None, score: float, length: int) -> dict[str, Any]:
+def _outlook(draft: Declaration, made: table_making.MadeTable | None, behaviour: table_making.Behaviour | None, score: float,
+             length: int) -> dict[str, Any]:
     """Spread, lengths reached with given probabilities, and the table."""
     if draft.method not in FACTOR_METHODS:
         return {}
@@ -154,7 +157,7 @@ def _outlook(draft: Declaration, made: table_making.MadeTable | None, score: flo
         tests = draft.settings.test_probability
         spread = math.sqrt(draft.rounds * tests * score * (1 - score)) * (won - lost)
         return {"spread_bits": spread, "reached": {p: min(n, length) for p, n in reached.items()}}
-    reached = {f"{p:g}": min(max(_reached(draft, made, p), 0), length) for p in chances}
+    reached = {f"{p:g}": min(max(_reached(draft, made, behaviour, p), 0), length) for p in chances}
     return {"spread_bits": made.deviation * math.sqrt(draft.rounds), "reached": reached, "validity_bound": made.validity_bound,
             "table": {"test": list(made.table.test), "generation": list(made.table.generation)}}
 
@@ -225,6 +228,14 @@ def _rounds_for_table(length: int, limit: int, arguments: dict[str, Any]) -> int
     raise InputError(f"{length} bits could not be planned at this score and soundness", code="out-of-reach", field="/length")
 
 
+def _behaviour(common: dict[str, Any], behaviour: table_making.Behaviour | None) -> table_making.Behaviour | None:
+    """What factor-table expects (None for the others, which only need the score); checks the score where it is needed."""
+    if common["method"] == "factor-table" and behaviour is not None:
+        return behaviour
+    _check_score(common["expected_score"])
+    return _of_score(common["expected_score"], common["convention"]) if common["method"] == "factor-table" else None
+
+
 def _of_score(score: float, convention: Convention) -> table_making.Behaviour:
     return tuple(behaviours.of_score(score, convention).reshape(-1).tolist())
 
@@ -233,11 +244,7 @@ def _checked_draft(common: dict[str, Any], output_rule: str, order: float | None
                    behaviour: table_making.Behaviour | None) -> tuple[Declaration, table_making.MadeTable | None]:
     """(a declaration with the largest length, what is known about its table if it is factor-table)."""
     if common["method"] != "factor-table":
-        _check_score(common["expected_score"])
         return _draft(common, output_rule, order, confidence), None
-    if behaviour is None:
-        _check_score(common["expected_score"])
-        behaviour = _of_score(common["expected_score"], common.get("convention", Convention()))
     zero = ScoreTable(1.5 if order is None else order, (0.0,) * 16, (0.0,) * 4)
     shell = dict(common, output_rule=output_rule, output_bits=2 * common["rounds"] if isinstance(common["rounds"], int) else 1)
     Declaration(**shell, order=zero.order, table=zero)                 # field checks, before the search sees the numbers
@@ -256,18 +263,11 @@ def _table_tally(draft: Declaration, behaviour: table_making.Behaviour) -> Tally
     return Tally(tuple(counts))
 
 
-def _reached(draft: Declaration, made: table_making.MadeTable, probability: float) -> int:
+def _reached(draft: Declaration, made: table_making.MadeTable, behaviour: table_making.Behaviour, probability: float) -> int:
     """Available bits that an honest rig reaches with this probability."""
-    nothing = bound.certify(draft, Tally.empty())                      # all that does not depend on the tally
-    return math.floor(made.credit_reached(draft.rounds, probability) + math.fsum(t.bits for t in nothing.terms) - 1e-6)
-
-
-def _check_score(score: float) -> None:
-    if isinstance(score, bool) or not isinstance(score, (int, float)) or not 0.75 < score < search.TSIRELSON:
-        raise InputError(
-            f"a winning probability of {score!r} is not between the local bound 0.75 and the Tsirelson bound 0.853553…; "
-            "nothing can be certified at or below the local bound, and nothing quantum lies above the other",
-            code="score-out-of-range", field="/score")
+    terms = bound.certify(draft, _table_tally(draft, behaviour)).terms
+    penalty = math.fsum(term.bits for term in terms[1:])
+    return math.floor(made.credit_reached(draft.rounds, probability) + penalty - 1e-6)
 
 
 def _draft(common: dict[str, Any], output_rule: str, order: float | None, confidence: float) -> Declaration:
@@ -310,8 +310,8 @@ def _quantile(n: int, p: float, level: float) -> int:
     if level == 0.5:
         return math.floor(n * p)
     if n < 10**9:
-        return int(stats.binom.ppf(level, n, p))
-    return min(max(math.floor(n * p + stats.norm.ppf(level) * math.sqrt(n * p * (1 - p))), 0), n)
+        return min(max(math.ceil(float(special.bdtrik(level, n, p))), 0), n)
+    return min(max(math.floor(n * p + float(special.ndtri(level)) * math.sqrt(n * p * (1 - p))), 0), n)
 
 
 def _expected(declaration: Declaration, score: float, confidence: float) -> Tally:

@@ -48,7 +48,8 @@ def assumptions(declaration: Declaration, rounds: int) -> tuple[str, ...]:
         lines.append("The adversary does not see this certificate, the tally or the report while the bits have to stay secret "
                      "(declare disclosure \"public\" to have what they reveal paid for).")
     else:
-        lines.append("Published are at most: certificate, tally, no-click counts and one digest of the rounds; what they reveal is paid for.")
+        lines.append("Published are at most: certificate, report, tally, no-click counts, one digest of the rounds and the commitment to the "
+                     "segments' digests; what they reveal is paid for.")
     if declaration.method not in FACTOR_METHODS:
         lines.append("The accumulation theorem holds in the form stated under \"source\"; this program's constants were checked against "
                      "the published figures of experiments, not against a proof of its own.")

@@ -1,4 +1,4 @@
-"""Bodies as they come from the wire: bounded, timed, strict; and the headers that speak about them (RFC 9530, RFC 9110)."""
+"""Bodies as they come from the wire: bounded, timed, strict; and the headers about them (RFC 9530, RFC 9110)."""
 
 from __future__ import annotations
 
@@ -33,7 +33,8 @@ def timed(receive: Receive, timeout_s: float) -> Receive:
             async with asyncio.timeout(timeout_s):
                 return await receive()
         except TimeoutError:
-            raise BrokenTransfer(f"no further piece of the body came within {timeout_s:g} s", code="upload-too-slow") from None
+            raise BrokenTransfer(f"no further piece of the body came within {timeout_s:g} s",
+                                 code="upload-too-slow") from None
     return within
 
 
@@ -49,7 +50,7 @@ def pieces_of(request: Request) -> AsyncIterator[bytes]:
 
 
 async def drain(request: Request) -> None:
-    """Reads a body that is not wanted. A sender that is cut off while sending would see a broken line, not the answer."""
+    """Reads a body that is not wanted: a sender that is cut off would see a broken line, not the answer."""
     total = 0
     async for piece in pieces_of(request):
         total += len(piece)
@@ -84,7 +85,7 @@ def digest_header(digest: bytes) -> str:
 
 
 def file_name(request: Request, given: str | None, otherwise: str) -> str:
-    """What error texts call the body: ?name=, else the name in Content-Disposition, else `otherwise`. One printable line."""
+    """What error texts call the body, one printable line: ?name=, else Content-Disposition, else `otherwise`."""
     name = given
     if name is None:
         header = request.headers.get("content-disposition", "")
@@ -112,7 +113,8 @@ def byte_range(header: str | None, size: int) -> tuple[int, int] | None:
     else:
         first, last = max(0, size - int(match[2])), size - 1
     if first >= size or first > last:
-        raise Problem(416, "range-not-satisfiable", f"there are {size} bytes", headers={"Content-Range": f"bytes */{size}"})
+        raise Problem(416, "range-not-satisfiable", f"there are {size} bytes",
+                      headers={"Content-Range": f"bytes */{size}"})
     return first, last
 
 
@@ -129,7 +131,8 @@ class _StrictRequest(Request):
             gathered = bytearray()
             try:
                 if announced is not None and announced > limit:
-                    raise BrokenTransfer(f"{announced} bytes are announced, {limit} are accepted", code="upload-too-large")
+                    raise BrokenTransfer(f"{announced} bytes are announced, {limit} are accepted",
+                                         code="upload-too-large")
                 async for piece in self.stream():
                     gathered += piece
                     if len(gathered) > limit:

@@ -37,7 +37,8 @@ def record(body: schemas.DeclarationDocument, parts: PartsOf, identity: Submitte
     document = declaration_document(declaration)
 
     def make(transaction: Transaction) -> dict[str, Any]:
-        declaration_id, digest, now = new_id("d"), canonical.digest(document), parts.ledger.time(transaction, now_text())
+        declaration_id, digest = new_id("d"), canonical.digest(document)
+        now = parts.ledger.time(transaction, now_text())
         index = parts.ledger.append(transaction, "declaration", declaration_id, {"digest": digest}, now)
         return _shown(transaction.insert_declaration(DeclarationRow(
             id=declaration_id, owner=identity.owner, digest=digest, time=now, ledger_index=index, document=document)))
@@ -47,7 +48,8 @@ def record(body: schemas.DeclarationDocument, parts: PartsOf, identity: Submitte
     return answer
 
 
-@router.get("", response_model=schemas.Declarations, operation_id="list_declarations", summary="Your declarations, newest first",
+@router.get("", response_model=schemas.Declarations, operation_id="list_declarations",
+            summary="Your declarations, newest first",
             responses=documented(401, 422))
 def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 50, before: Before = None,
           everybody: Annotated[bool, Query(description="of all owners (admin only)")] = False) -> Any:
@@ -67,4 +69,5 @@ def read(declaration: str, parts: PartsOf, identity: Anybody) -> Any:
 
 
 def _shown(row: DeclarationRow) -> dict[str, Any]:
-    return {"id": row.id, "digest": row.digest, "time": row.time, "ledger_index": row.ledger_index, "declaration": row.document}
+    return {"id": row.id, "digest": row.digest, "time": row.time, "ledger_index": row.ledger_index,
+            "declaration": row.document}

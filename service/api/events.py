@@ -1,4 +1,4 @@
-"""/v1/runs/{run}/events: the run as server-sent events, numbered by the database, so that a watcher can go on where it stopped.
+"""/v1/runs/{run}/events: the run as server-sent events; a watcher can go on where it stopped.
 
 Every change of state or stage is an event with an id. In between, the share done is told by events without an id: they
 are not kept, and a watcher that comes back does not need them. Silence is filled with comments.
@@ -18,7 +18,7 @@ from fastapi.responses import StreamingResponse
 
 from service.api.auth import Anybody, PartsOf
 from service.api.bodies import StrictRoute
-from service.api.problems import documented
+from service.api.problems import sending
 from service.jobs.states import FINAL_STATES
 from service.parts import Parts
 from service.runs import describe, owned_run
@@ -27,14 +27,15 @@ from service.store.contracts import EventRow
 router = APIRouter(prefix="/v1/runs", tags=["runs"], route_class=StrictRoute)
 MEDIA_TYPE = "text/event-stream"
 PAGE = 100
-_DOCUMENT = {200: {"description": "events named `run`; data is the Run, id its number within the run", "content": {MEDIA_TYPE: {
-    "schema": {"type": "string"}, "example": 'id: 4\nevent: run\ndata: {"id":"r5ce1a7d02b94e683","state":"working",...}\n\n'}}}}
+_LAST = Header(alias="Last-Event-ID", max_length=18, pattern=r"^\d*$",
+               description="number of the last event already seen")
 
 
 @router.get("/{run}/events", operation_id="watch_run", summary="The run as server-sent events, until it is final",
-            response_class=StreamingResponse, responses={**_DOCUMENT, **documented(401, 404, 422)})
-def events(run: str, request: Request, parts: PartsOf, identity: Anybody, last: Annotated[str | None, Header(
-        alias="Last-Event-ID", max_length=20, pattern=r"^\d*$", description="number of the last event already seen")] = None) -> Any:
+            response_class=StreamingResponse, responses=sending(
+                MEDIA_TYPE, "events named `run`: data is the Run as JSON, id its number within the run", 401, 404, 422))
+def events(run: str, request: Request, parts: PartsOf, identity: Anybody,
+           last: Annotated[str | None, _LAST] = None) -> Any:
     with parts.store.read() as reading:
         owned_run(reading, run, identity)
     return StreamingResponse(_stream(request, parts, run, int(last or 0)), media_type=MEDIA_TYPE,

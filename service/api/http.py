@@ -14,7 +14,9 @@ from fastapi import FastAPI
 from fastapi.openapi.utils import get_openapi
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
-from service.api import declarations, docs, events, ledger, operations, plans, problems, results, runs, schemas, segments
+from service.api import (
+    declarations, docs, events, ledger, operations, plans, problems, results, runs, schemas, segments,
+)
 from service.clock import now_s
 from service.collection import finish_erasures
 from service.parts import Parts
@@ -27,16 +29,17 @@ _SAFETY = ((b"x-content-type-options", b"nosniff"), (b"referrer-policy", b"no-re
 _ALWAYS_OPEN = ("/livez", "/readyz")
 _DESCRIPTION = """Rounds of a Bell test in, certified random bits and an audit report out.
 
-Record a **declaration** before the rounds exist, open a **run** under it, upload its **segments**, **seal** it, watch it, and collect
-certificate, report, bundle and **bits**; confirming the **collection** erases everything the bits could be made from.
+Record a **declaration** before the rounds exist, open a **run** under it, upload its **segments**, **seal** it, watch
+it, and collect certificate, report, bundle and **bits**; confirming the **collection** erases everything the bits
+could be made from.
 
 Every error is an RFC 9457 problem with a stable `code`. A certificate is conditional on the assumptions it lists."""
 
 
 def build(parts: Parts) -> FastAPI:
     """The application. `app.state.stopping` ends event streams; `app.state.on_failure` is called if the disk fails."""
-    app = FastAPI(title="bellassay", version=VERSION, description=_DESCRIPTION, docs_url=None, redoc_url=None, lifespan=_life,
-                  separate_input_output_schemas=False)
+    app = FastAPI(title="bellassay", version=VERSION, description=_DESCRIPTION, lifespan=_life,
+                  docs_url=None, redoc_url=None, separate_input_output_schemas=False)
     state = app.state
     state.parts, state.uploads = parts, UploadRoom(parts.settings.uploads_at_once)
     state.stopping, state.failed = threading.Event(), threading.Event()
@@ -90,7 +93,8 @@ class Surroundings:
             await send(message)
 
         if self._state.failed.is_set() and scope["path"] not in _ALWAYS_OPEN:
-            closed = problems.Problem(503, "storage-failed", "the disk failed; the service is stopping", headers={"Connection": "close"})
+            closed = problems.Problem(503, "storage-failed", "the disk failed; the service is stopping",
+                                      headers={"Connection": "close"})
             await closed.response()(scope, receive, observed)
             return
         await self._inner(scope, receive, observed)
@@ -115,9 +119,10 @@ def _openapi(app: FastAPI) -> dict[str, Any]:
 
 
 def _only_problems(operation: dict[str, Any]) -> None:
-    """The framework documents its own 422; ours is a problem like the others."""
+    """The framework documents its own 422; ours is a problem like the others. Any operation may find the service busy."""
+    operation["responses"].setdefault("default", {"description": "any other problem"})
     for status, answer in operation.get("responses", {}).items():
-        if status.startswith(("4", "5")):
+        if status.startswith(("4", "5", "default")):
             answer["content"] = {problems.MEDIA_TYPE: {"schema": {"$ref": "#/components/schemas/Problem"}}}
 
 

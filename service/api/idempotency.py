@@ -33,7 +33,8 @@ def once(parts: Parts, identity: Identity, key: str | None, kind: str, body: Any
         found = transaction.get_idempotent(identity.owner, key)
         if found is not None and found.created_s >= now - parts.settings.idempotency_keep_s:
             if found.request_digest != digest:
-                raise Problem(422, "idempotency-key-reused", "this Idempotency-Key was used for another request; take a new one")
+                raise Problem(422, "idempotency-key-reused",
+                              "this Idempotency-Key was used for another request; take a new one")
             return found.response
         transaction.drop_idempotent(now - parts.settings.idempotency_keep_s)
         answer = make(transaction)

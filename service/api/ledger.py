@@ -13,22 +13,21 @@ from extractor.seal import canonical
 from service.api import schemas
 from service.api.auth import Anybody, PartsOf
 from service.api.bodies import StrictRoute
-from service.api.problems import documented
+from service.api.problems import documented, sending
 from service.ledger import ENTRIES_LIMIT
 
 router = APIRouter(prefix="/v1/ledger", tags=["ledger"], route_class=StrictRoute)
 Place = Annotated[int | None, Query(ge=0, le=2**53 - 1)]
-_TEXT = {"content": {"text/plain": {"schema": {"type": "string"}}}}
 
 
-@router.get("/checkpoint", operation_id="read_checkpoint", summary="The newest checkpoint, a signed note", response_class=PlainTextResponse,
-            responses={200: {"description": "C2SP tlog-checkpoint", **_TEXT}, **documented(401)})
+@router.get("/checkpoint", operation_id="read_checkpoint", summary="The newest checkpoint, a signed note",
+            response_class=PlainTextResponse, responses=sending("text/plain", "C2SP tlog-checkpoint", 401))
 def checkpoint(parts: PartsOf, identity: Anybody) -> Any:
     return parts.ledger.checkpoint()
 
 
-@router.get("/key", operation_id="read_ledger_key", summary="The key that signs the checkpoints", response_class=PlainTextResponse,
-            responses={200: {"description": "C2SP signed-note verifier key", **_TEXT}, **documented(401)})
+@router.get("/key", operation_id="read_ledger_key", summary="The key that signs the checkpoints",
+            response_class=PlainTextResponse, responses=sending("text/plain", "C2SP signed-note verifier key", 401))
 def key(parts: PartsOf, identity: Anybody) -> Any:
     return parts.ledger.verifier_text + "\n"
 
@@ -53,8 +52,10 @@ def proof(parts: PartsOf, identity: Anybody, size: Place = None, index: Place = 
         raise InputError("give either index or old", code="bad-usage", field="index")
     size = parts.ledger.size() if size is None else size
     if index is not None:
-        return {"kind": "inclusion", "size": size, "index": index, "hashes": [*map(_text, parts.ledger.inclusion(index, size))]}
-    return {"kind": "consistency", "size": size, "old": old, "hashes": [*map(_text, parts.ledger.consistency(old or 0, size))]}
+        hashes = parts.ledger.inclusion(index, size)
+        return {"kind": "inclusion", "size": size, "index": index, "hashes": [*map(_text, hashes)]}
+    hashes = parts.ledger.consistency(old or 0, size)
+    return {"kind": "consistency", "size": size, "old": old, "hashes": [*map(_text, hashes)]}
 
 
 def _text(value: bytes) -> str:

@@ -9,16 +9,18 @@ from fastapi.responses import PlainTextResponse
 
 from service.api import schemas
 from service.api.auth import Auditor, PartsOf
-from service.api.problems import Problem, documented
+from service.api.problems import Problem, documented, sending
 
 router = APIRouter(tags=["operation"])
 OPENMETRICS = "application/openmetrics-text; version=1.0.0; charset=utf-8"
 
 
-@router.get("/livez", response_model=schemas.Health, operation_id="livez", summary="The process runs", responses=documented(503))
+@router.get("/livez", response_model=schemas.Health, operation_id="livez", summary="The process runs",
+            responses=documented(503))
 def livez(request: Request) -> Any:
     if request.app.state.failed.is_set():
-        raise Problem(503, "storage-failed", "the disk failed; the service must be started again after the operator has acted")
+        raise Problem(503, "storage-failed",
+                      "the disk failed; the service must be started again after the operator has acted")
     return {"status": "alive"}
 
 
@@ -33,9 +35,9 @@ def readyz(request: Request, parts: PartsOf) -> Any:
     return {"status": "ready"}
 
 
-@router.get("/metrics", operation_id="metrics", summary="Numbers for monitoring (scope audit)", response_class=PlainTextResponse,
-            responses={200: {"description": "OpenMetrics text", "content": {"application/openmetrics-text": {"schema": {"type": "string"}}}},
-                       **documented(401, 403)})
+@router.get("/metrics", operation_id="metrics", summary="Numbers for monitoring (scope audit)",
+            response_class=PlainTextResponse,
+            responses=sending("application/openmetrics-text", "OpenMetrics text", 401, 403))
 def metrics(request: Request, parts: PartsOf, identity: Auditor) -> Any:
     with parts.store.read() as reading:
         runs, head = reading.count_runs(), reading.ledger_head()

@@ -16,7 +16,8 @@ def next_page(response: Response, path: str, rows: Sequence[Any], limit: int, ot
     """Address of the page after `rows`, of which one more than `limit` was fetched if there is one; sets Link."""
     if len(rows) <= limit:
         return None
-    query = {"limit": limit, "before": rows[limit - 1].number} | {name: value for name, value in others.items() if value is not None}
+    kept = {name: value for name, value in others.items() if value is not None}
+    query = {"limit": limit, "before": rows[limit - 1].number} | kept
     address = f"{path}?{urlencode(query, doseq=True)}"
     response.headers["Link"] = f'<{address}>; rel="next"'
     return address

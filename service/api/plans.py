@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 from typing import Any
 
 from fastapi import APIRouter
@@ -15,13 +16,17 @@ from service.api import schemas
 from service.api.auth import Anybody
 from service.api.bodies import StrictRoute
 from service.api.problems import documented
+from service.errors import Unavailable
 
 router = APIRouter(prefix="/v1/plan", tags=["planning"], route_class=StrictRoute)
+# Planning takes a processor for seconds: it must not take them all.
+_ROOM, WAIT_S = threading.BoundedSemaphore(2), 10.0
 _ALWAYS_WRONG = ("score-out-of-range", "out-of-range", "bad-number", "bad-settings")      # whatever the method
 
 
-@router.post("", response_model=schemas.Plans, operation_id="plan", summary="Expected certified length, or the rounds a length needs",
-             responses=documented(400, 401, 415, 422))
+@router.post("", response_model=schemas.Plans, operation_id="plan",
+             summary="Expected certified length, or the rounds a length needs",
+             responses=documented(400, 401, 415, 422, 503))
 def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
     """With `rounds`: what they may be expected to certify, per method. With `length`: how many rounds that takes."""
     if (body.rounds is None) == (body.length is None):
@@ -29,9 +34,20 @@ def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
     if (body.score is None) == (body.calibration is None):
         raise InputError("give either score or calibration", code="bad-usage", field="/score")
     s = body.settings
-    common = dict(score=_score(body), settings=Settings(s.test_probability, tuple(s.distribution), tuple(s.generation), s.bias),
-                  soundness=body.soundness, output_rule=body.output_rule, disclosure=body.disclosure, order=body.order,
-                  confidence=body.confidence)
+    settings = Settings(s.test_probability, tuple(s.distribution), tuple(s.generation), s.bias)
+    common = dict(score=_score(body), settings=settings, soundness=body.soundness, output_rule=body.output_rule,
+                  disclosure=body.disclosure, order=body.order, confidence=body.confidence)
+    if not _ROOM.acquire(timeout=WAIT_S):
+        raise Unavailable("others are planning; try again", code="planning-busy", retry_after_s=WAIT_S)
+    try:
+        plans, others = _plans(body, common)
+    finally:
+        _ROOM.release()
+    return {"score": common["score"], "plans": plans, "not_applicable": others}
+
+
+def _plans(body: schemas.PlanRequest, common: dict[str, Any]) -> tuple[list[dict[str, Any]], list[dict[str, Any]]]:
+    """A plan per method, and why the others do not apply."""
     plans, others = [], []
     for method in (body.method,) if body.method else METHODS:
         try:
@@ -41,7 +57,7 @@ def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
             if body.method or fault.code in _ALWAYS_WRONG:
                 raise
             others.append({"method": method, "code": fault.code, "detail": str(fault)})
-    return {"score": common["score"], "plans": plans, "not_applicable": others}
+    return plans, others
 
 
 def _score(body: schemas.PlanRequest) -> float:

@@ -2,8 +2,8 @@
 
     InputError      422 (400 where the message itself is malformed)   Unavailable    503, disk full 507
     NotFound        404                                               StorageFailed  503, and the service stops
-    Conflict        409, Gone and KeyErased 410                       DamagedFile    500, Defect and the rest 500 without a word more
-    BrokenTransfer  400, 408, 413
+    Conflict        409, Gone and KeyErased 410                       ProofError     500
+    BrokenTransfer  400, 408, 413                                     Defect, others 500 without a word more
 
 Only texts written for the caller go out; an unexpected exception is logged, and its text stays inside.
 """
@@ -31,7 +31,8 @@ TITLES = {
     404: "There is no such thing here", 405: "This address does not take that method", 406: "No acceptable form",
     408: "The request came too slowly", 409: "The request does not fit the present state", 410: "Erased for good",
     413: "The body is too large", 415: "The body must be JSON", 416: "The range cannot be served",
-    422: "A value is not acceptable", 500: "The service failed", 503: "Not possible just now", 507: "The data disk is full",
+    422: "A value is not acceptable", 500: "The service failed", 503: "Not possible just now",
+    507: "The data disk is full",
 }
 _MALFORMED = ("bad-json", "repeated-key", "content-digest-missing", "content-digest-malformed")
 _TRANSFER = {"upload-too-slow": 408, "upload-too-large": 413}
@@ -72,23 +73,27 @@ def problem_of(fault: Exception) -> Problem:
             return Problem(_TRANSFER.get(fault.code, 400), fault.code, fault.message,
                            headers={"Connection": "close"} if fault.code == "upload-too-slow" else None)
         case Unavailable():
-            return Problem(507 if fault.code == "disk-full" else 503, fault.code, fault.message, retry_after_s=fault.retry_after_s)
+            return Problem(507 if fault.code == "disk-full" else 503, fault.code, fault.message,
+                           retry_after_s=fault.retry_after_s)
         case StorageFailed():
-            return Problem(503, fault.code, "the disk failed; the service stops and the operator must act", headers={"Connection": "close"})
+            return Problem(503, fault.code, "the disk failed; the service stops and the operator must act",
+                           headers={"Connection": "close"})
         case ProofError():
             return Problem(500, fault.code, fault.message)
         case RequestValidationError():
             return _validation(fault)
         case HTTPException():
             code = {404: "not-found", 405: "method-not-allowed"}.get(fault.status_code, "bad-request")
-            return Problem(fault.status_code, code, TITLES.get(fault.status_code, str(fault.detail)), headers=fault.headers)
+            return Problem(fault.status_code, code, TITLES.get(fault.status_code, str(fault.detail)),
+                           headers=fault.headers)
         case _:
             return Problem(500, "defect", "an error of the service itself; it was logged")
 
 
 def _place(fault: InputError) -> dict[str, Any]:
     pointer = fault.field if fault.field and fault.field.startswith("/") else None
-    place = {"pointer": pointer, "detail": fault.message, "file": fault.file, "row": fault.row, "field": None if pointer else fault.field}
+    place = {"pointer": pointer, "detail": fault.message, "file": fault.file, "row": fault.row,
+             "field": None if pointer else fault.field}
     return {name: value for name, value in place.items() if value is not None}
 
 
@@ -97,10 +102,14 @@ def _validation(fault: RequestValidationError) -> Problem:
     errors = []
     for error in fault.errors():
         source, *path = error["loc"] or ("body",)
-        place = {"pointer": "".join(f"/{part}" for part in path) or "/"} if source == "body" else {"field": ".".join(map(str, path))}
+        if source == "body":
+            place = {"pointer": "".join(f"/{part}" for part in path) or "/"}
+        else:
+            place = {"field": ".".join(map(str, path))}
         errors.append({**place, "detail": error["msg"]})
     first = errors[0] if errors else {"detail": "it does not fit its type"}
-    return Problem(422, "bad-request", f"{first.get('pointer') or first.get('field', '')}: {first['detail']}", errors=tuple(errors))
+    return Problem(422, "bad-request", f"{first.get('pointer') or first.get('field', '')}: {first['detail']}",
+                   errors=tuple(errors))
 
 
 def install(app: FastAPI) -> None:
@@ -121,4 +130,11 @@ def install(app: FastAPI) -> None:
 def documented(*statuses: int) -> dict[int | str, dict[str, Any]]:
     """The `responses` of a route: which problems it can answer with, beside the usual ones."""
     return {status: {"description": TITLES[status],
-                     "content": {MEDIA_TYPE: {"schema": {"$ref": "#/components/schemas/Problem"}}}} for status in statuses}
+                     "content": {MEDIA_TYPE: {"schema": {"$ref": "#/components/schemas/Problem"}}}}
+            for status in statuses}
+
+
+def sending(media_type: str, description: str, *statuses: int) -> dict[int | str, dict[str, Any]]:
+    """The `responses` of a route that sends something else than a document of `schemas`, and its problems."""
+    schema = {"type": "object"} if media_type == "application/json" else {"type": "string"}
+    return {200: {"description": description, "content": {media_type: {"schema": schema}}}, **documented(*statuses)}

@@ -12,7 +12,7 @@ from fastapi.responses import FileResponse, StreamingResponse
 from service.api import schemas
 from service.api.auth import Collector, PartsOf, Reader
 from service.api.bodies import StrictRoute, digest_header
-from service.api.problems import Problem, documented
+from service.api.problems import Problem, documented, sending
 from service.api.sending import BINARY, send_vault_file
 from service.collection import confirm, open_bits
 from service.errors import Conflict
@@ -25,9 +25,9 @@ JSON, ZIP = "application/json", "application/zip"
 _PENDING = ("open", "sealed", "working")
 
 
-@router.get("/{run}/certificate", operation_id="read_certificate", summary="The certificate or refusal, canonical JSON",
-            response_class=Response, responses={200: {"description": "RFC 8785 bytes, as committed to in the ledger", "content": {
-                JSON: {"schema": {"type": "object"}}}}, **documented(401, 403, 404, 409)})
+@router.get("/{run}/certificate", operation_id="read_certificate", response_class=Response,
+            summary="The certificate or refusal, canonical JSON",
+            responses=sending(JSON, "RFC 8785 bytes, as committed to in the ledger", 401, 403, 404, 409))
 def certificate(run: str, parts: PartsOf, identity: Reader) -> Any:
     row = _run(parts, run, identity)
     if row.certificate is None:
@@ -35,32 +35,34 @@ def certificate(run: str, parts: PartsOf, identity: Reader) -> Any:
     return Response(row.certificate, media_type=JSON, headers=_digests(hashlib.sha256(row.certificate).digest()))
 
 
-@router.get("/{run}/report", operation_id="read_report", summary="The audit report", response_class=Response, responses={
-    200: {"description": "RFC 8785 bytes", "content": {JSON: {"schema": {"type": "object"}}}}, **documented(401, 403, 404, 406, 409)})
+@router.get("/{run}/report", operation_id="read_report", response_class=Response, summary="The audit report",
+            responses=sending(JSON, "RFC 8785 bytes", 401, 403, 404, 406, 409))
 def report(run: str, request: Request, parts: PartsOf, identity: Reader) -> Any:
     row = _run(parts, run, identity)
     if not _accepts(request.headers.get("accept", "*/*"), JSON):
         raise Problem(406, "not-acceptable", f"the report is available as {JSON}")
-    if row.report_digest is None:
+    if row.report_digest is None or row.state in _PENDING:
         raise _not_yet(parts, row, "report")
     data = parts.blobs.report_path(run).read_bytes()
     return Response(data, media_type=JSON, headers={**_digests(hashlib.sha256(data).digest()), "Vary": "Accept"})
 
 
-@router.get("/{run}/bundle", operation_id="read_bundle", summary="Report, proofs and what else an offline check needs, as a zip file",
-            response_class=FileResponse, responses={200: {"description": "zip file", "content": {ZIP: {}}}, **documented(401, 403, 404, 409)})
+@router.get("/{run}/bundle", operation_id="read_bundle", response_class=FileResponse,
+            summary="Report, proofs and what else an offline check needs, as a zip file",
+            responses=sending(ZIP, "zip file", 401, 403, 404, 409))
 def bundle(run: str, parts: PartsOf, identity: Reader) -> Any:
     row = _run(parts, run, identity)
-    if row.report_digest is None:
+    if row.report_digest is None or row.state in _PENDING:
         raise _not_yet(parts, row, "bundle")
     path = parts.blobs.bundle_path(run)
     return FileResponse(path, media_type=ZIP, filename=f"{run}.zip", headers=_digests(_file_digest(path)))
 
 
-@router.get("/{run}/bits", operation_id="read_bits", summary="The certified bits (Range honoured)", response_class=StreamingResponse,
-            responses={200: {"description": "the bits, packed from the least significant bit of each byte on; the header Bits-Salt "
-                                            "opens the ledger's commitment", "content": {BINARY: {}}},
-                       206: {"description": "the range asked for"}, **documented(401, 403, 404, 409, 410, 416)})
+@router.get("/{run}/bits", operation_id="read_bits", response_class=StreamingResponse,
+            summary="The certified bits (Range honoured)",
+            responses={**sending(BINARY, "the bits, packed from the least significant bit of each byte on; the header "
+                                         "Bits-Salt opens the commitment", 401, 403, 404, 409, 410, 416),
+                       206: {"description": "the range asked for"}})
 def bits(run: str, request: Request, parts: PartsOf, identity: Collector) -> Any:
     """May be fetched as often as needed until the collection is confirmed; from then on nobody can get them again."""
     stored = open_bits(parts, _run(parts, run, identity))
@@ -69,7 +71,8 @@ def bits(run: str, request: Request, parts: PartsOf, identity: Collector) -> Any
 
 
 @router.post("/{run}/collection", response_model=schemas.Collection, operation_id="confirm_collection",
-             summary="Confirm that the bits are safely stored: the run's key is erased", responses=documented(400, 401, 403, 404, 409, 415, 422))
+             summary="Confirm that the bits are safely stored: the run's key is erased",
+             responses=documented(400, 401, 403, 404, 409, 415, 422))
 def collection(run: str, body: schemas.CollectionRequest, parts: PartsOf, identity: Collector) -> Any:
     """Of many callers exactly one wins. Rounds, seed and bits of the run cannot be read by anybody afterwards."""
     row, index = confirm(parts, _run(parts, run, identity), bytes.fromhex(body.digest.removeprefix("sha256:")))

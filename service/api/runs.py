@@ -20,9 +20,11 @@ from service.store.contracts import Transaction
 router = APIRouter(prefix="/v1/runs", tags=["runs"], route_class=StrictRoute)
 
 
-@router.post("", status_code=201, response_model=schemas.Run, operation_id="open_run", summary="Open a run under a declaration",
+@router.post("", status_code=201, response_model=schemas.Run, operation_id="open_run",
+             summary="Open a run under a declaration",
              responses=documented(400, 401, 403, 404, 415, 422, 507))
-def open_(body: schemas.NewRun, parts: PartsOf, identity: Submitter, response: Response, key: IdempotencyKey = None) -> Any:
+def open_(body: schemas.NewRun, parts: PartsOf, identity: Submitter, response: Response,
+          key: IdempotencyKey = None) -> Any:
     with parts.store.read() as reading:
         declaration = owned_declaration(reading, body.declaration, identity)
     parts.blobs.need(0)
@@ -37,17 +39,19 @@ def open_(body: schemas.NewRun, parts: PartsOf, identity: Submitter, response: R
     try:
         answer = once(parts, identity, key, "runs", body.model_dump(), make)
     finally:
-        if answer is None or answer["id"] != run_id:    # answered before, or not at all: the key made above is of no use
+        if answer is None or answer["id"] != run_id:        # answered before, or not at all: the new key is of no use
             parts.keys.erase(run_id)
-            parts.blobs.remove_secrets(run_id)
+            parts.blobs.discard(run_id)
     response.headers["Location"] = f"/v1/runs/{answer['id']}"
     return answer
 
 
-@router.get("", response_model=schemas.Runs, operation_id="list_runs", summary="Your runs, newest first", responses=documented(401, 422))
+@router.get("", response_model=schemas.Runs, operation_id="list_runs", summary="Your runs, newest first",
+            responses=documented(401, 422))
 def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 50, before: Before = None,
           state: Annotated[list[schemas.State] | None, Query(description="only runs in one of these states")] = None,
-          declaration: Annotated[str | None, Query(max_length=64, description="only runs under this declaration")] = None,
+          declaration: Annotated[str | None,
+                                 Query(max_length=64, description="only runs under this declaration")] = None,
           everybody: Annotated[bool, Query(description="of all owners (admin only)")] = False) -> Any:
     limit = min(limit, parts.settings.page_items)
     owner = None if everybody and identity.may("admin") else identity.owner
@@ -58,7 +62,8 @@ def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 
     return {"runs": shown, "next": next_page(response, "/v1/runs", rows, limit, others)}
 
 
-@router.get("/{run}", response_model=schemas.Run, operation_id="read_run", summary="State, stage, share done, time left",
+@router.get("/{run}", response_model=schemas.Run, operation_id="read_run",
+            summary="State, stage, share done, time left",
             responses=documented(401, 404))
 def read(run: str, parts: PartsOf, identity: Anybody) -> Any:
     with parts.store.read() as reading:
@@ -69,8 +74,8 @@ def read(run: str, parts: PartsOf, identity: Anybody) -> Any:
              summary="No more rounds: fixes what arrived in the ledger and starts the job",
              responses=documented(400, 401, 403, 404, 409, 415, 422))
 def seal_(run: str, body: schemas.SealRequest, parts: PartsOf, identity: Submitter, response: Response) -> Any:
-    """The numbers must be what arrived. Repeating the call is harmless. Ask Location again after Retry-After seconds, or
-    watch the events."""
+    """The numbers must be what arrived. Repeating the call is harmless. Ask Location again after Retry-After seconds,
+    or watch the events."""
     with parts.store.read() as reading:
         owned_run(reading, run, identity)
     row = seal(parts, run, body.segments, body.rounds)

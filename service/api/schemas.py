@@ -65,7 +65,8 @@ class SettingsDocument(_In):
     """How the settings of a round come about."""
 
     test_probability: float = Field(1.0, gt=0, le=1, description="P(t = 1)")
-    distribution: list[float] = Field([0.25] * 4, min_length=4, max_length=4, description="P(x, y | t = 1) for 00, 01, 10, 11")
+    distribution: list[float] = Field([0.25] * 4, min_length=4, max_length=4,
+                                      description="P(x, y | t = 1) for 00, 01, 10, 11")
     generation: list[Bit] = Field([0, 0], min_length=2, max_length=2, description="settings of t = 0 rounds")
     bias: float = Field(0.0, ge=0, le=0.25, description="how far off each setting bit's probability may be")
 
@@ -86,8 +87,10 @@ class OutputDocument(_In):
 
 
 class TableDocument(_In):
-    test: list[float] = Field(min_length=16, max_length=16, description="credits of the test cells, bits, index 8x+4y+2a+b")
-    generation: list[float] = Field(min_length=4, max_length=4, description="credits of the generation cells, index 2a+b")
+    test: list[float] = Field(min_length=16, max_length=16,
+                              description="credits of the test cells, bits, index 8x+4y+2a+b")
+    generation: list[float] = Field(min_length=4, max_length=4,
+                                    description="credits of the generation cells, index 2a+b")
 
 
 class AcceptanceDocument(_In):
@@ -122,9 +125,12 @@ class DeclarationDocument(_In):
     expected_score: float | None = None
     calibration: CalibrationDocument | None = None
     model_config = ConfigDict(strict=True, extra="forbid", json_schema_extra={"examples": [{
-        "format": "bellassay declaration 1", "rig": "north table", "purpose": "beacon of week 19", "rounds": 100_000_000,
-        "settings": {"test_probability": 1.0, "distribution": [0.25, 0.25, 0.25, 0.25], "generation": [0, 0], "bias": 0.0},
-        "convention": {"minus": [1, 1], "flip": False}, "no_click": {"a": 0, "b": 0}, "method": "eat-2018", "order": None,
+        "format": "bellassay declaration 1", "rig": "north table", "purpose": "beacon of week 19",
+        "rounds": 100_000_000,
+        "settings": {"test_probability": 1.0, "distribution": [0.25, 0.25, 0.25, 0.25], "generation": [0, 0],
+                     "bias": 0.0},
+        "convention": {"minus": [1, 1], "flip": False}, "no_click": {"a": 0, "b": 0}, "method": "eat-2018",
+        "order": None,
         "soundness": 1e-10, "output": {"rule": "fixed", "bits": 20_000_000}, "table": None,
         "acceptance": {"count": "wins", "limit": 84_990_000, "tangent": 0.8497}, "disclosure": "confidential",
         "seed_source": "system", "expected_score": 0.85, "calibration": None}]})
@@ -147,7 +153,8 @@ class Declarations(_Out):
 
 class NewRun(_In):
     declaration: str = Field(min_length=1, max_length=64, description="id of a recorded declaration")
-    model_config = ConfigDict(strict=True, extra="forbid", json_schema_extra={"examples": [{"declaration": "d3f0a91c5b7e2468d"}]})
+    model_config = ConfigDict(strict=True, extra="forbid",
+                              json_schema_extra={"examples": [{"declaration": "d3f0a91c5b7e2468d"}]})
 
 
 class Sealed(_Out):
@@ -163,10 +170,13 @@ class SeedState(_Out):
 
 
 _RUN = {
-    "id": "r5ce1a7d02b94e683", "declaration": "d3f0a91c5b7e24680", "state": "working", "stage": "hash", "fraction": 0.42,
+    "id": "r5ce1a7d02b94e683", "declaration": "d3f0a91c5b7e24680", "state": "working", "stage": "hash",
+    "fraction": 0.42,
     "eta_s": 71.5, "message": "", "created": TIME, "segments_received": 12, "rounds_received": 100_000_000,
-    "sealed": {"segments": 12, "rounds": 100_000_000, "time": TIME}, "certified_length": 20_000_000, "available_bits": 20_410_077,
-    "seed": {"source": "system", "bits_needed": 219_999_999, "received": True}, "waiting_for": None, "score": None, "diagnostics": None,
+    "sealed": {"segments": 12, "rounds": 100_000_000, "time": TIME}, "certified_length": 20_000_000,
+    "available_bits": 20_410_077,
+    "seed": {"source": "system", "bits_needed": 219_999_999, "received": True}, "waiting_for": None, "score": None,
+    "diagnostics": None,
     "stage_seconds": {"tally": 1.9, "certify": 0.1, "seed": 0.4}, "finished": None, "collected": None, "erased": None,
     "links": {"self": "/v1/runs/r5ce1a7d02b94e683"}}
 
@@ -238,13 +248,15 @@ class Segments(_Out):
 class SealRequest(_In):
     segments: int = Field(ge=1)
     rounds: int = Field(ge=1)
-    model_config = ConfigDict(strict=True, extra="forbid", json_schema_extra={"examples": [{"segments": 12, "rounds": 100_000_000}]})
+    model_config = ConfigDict(strict=True, extra="forbid",
+                              json_schema_extra={"examples": [{"segments": 12, "rounds": 100_000_000}]})
 
 
 class SeedReceipt(_Out):
     bits: int
     digest: str
-    model_config = ConfigDict(extra="forbid", json_schema_extra={"examples": [{"bits": 219_999_999, "digest": EXAMPLE_DIGEST}]})
+    model_config = ConfigDict(extra="forbid",
+                              json_schema_extra={"examples": [{"bits": 219_999_999, "digest": EXAMPLE_DIGEST}]})
 
 
 class CollectionRequest(_In):
@@ -296,8 +308,8 @@ class NotApplicable(_Out):
 
 class Plans(_Out):
     score: float
-    plans: list[dict[str, Any]] = Field(description="per method: certified_length, reliable_length, order, rate, penalty_bits, "
-                                                    "limit_rate, seed_bits, ...")
+    plans: list[dict[str, Any]] = Field(description="per method: certified_length, reliable_length, order, rate, "
+                                                    "penalty_bits, limit_rate, seed_bits, ...")
     not_applicable: list[NotApplicable]
 
 

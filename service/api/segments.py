@@ -15,7 +15,7 @@ from service.api.auth import Anybody, PartsOf, Reader, Submitter
 from service.api.bodies import (
     StrictRoute, announced_bytes, content_digest, digest_header, drain, file_name, pieces_of,
 )
-from service.api.problems import documented
+from service.api.problems import documented, sending
 from service.api.sending import BINARY, send_vault_file
 from service.custody.vault import open_vault
 from service.errors import Conflict, Gone, KeyErased
@@ -24,13 +24,16 @@ from service.runs import declaration_of, owned_run
 from service.store.blobs import SEED, segment_name
 from service.store.contracts import RunRow, SegmentRow
 from service.uploads import (
-    UploadRoom, check_number, receive, refuse_if_sealed, same_seed, seed_length, segment_differs, take_seed, take_segment,
+    UploadRoom, check_number, receive, refuse_if_sealed, same_seed, seed_length, segment_differs, take_seed,
+    take_segment,
 )
 
 router = APIRouter(prefix="/v1/runs", tags=["rounds and seeds"], route_class=StrictRoute)
 _OCTETS = {"requestBody": {"required": True, "content": {BINARY: {"schema": {"type": "string", "format": "binary"}}}},
            "parameters": [{"name": "Content-Digest", "in": "header", "required": True, "schema": {"type": "string"},
-                           "description": "RFC 9530", "example": "sha-256=:n4bQgYhMfWWaL+qgxVrQFaO/TxsrC4Is0V1sFbDwCgg=:"}]}
+                           "description": "RFC 9530",
+                           "example": "sha-256=:n4bQgYhMfWWaL+qgxVrQFaO/TxsrC4Is0V1sFbDwCgg=:"}]}
+Name = Annotated[str | None, Query(max_length=500, description="file name for error texts")]
 Number = Annotated[int, Path(description="1, 2, ... in the order in which the rounds were taken", examples=[1])]
 
 
@@ -38,10 +41,11 @@ Number = Annotated[int, Path(description="1, 2, ... in the order in which the ro
             summary="Upload a round file as a segment of the run", openapi_extra=_OCTETS,
             responses={200: {"model": schemas.Segment, "description": "this segment had arrived before"},
                        **documented(400, 401, 403, 404, 408, 409, 410, 413, 422, 503, 507)})
-async def put_segment(run: str, number: Number, request: Request, response: Response, parts: PartsOf, identity: Submitter,
-                      name: Annotated[str | None, Query(max_length=500, description="file name for error texts")] = None) -> Any:
-    """Any accepted format (NPY, NPZ, CSV). The body is streamed to encrypted storage; once its digest agrees, the rounds
-    are read, checked, packed and counted. 201 means all of that is done and durable. Repeating the request is harmless."""
+async def put_segment(run: str, number: Number, request: Request, response: Response, parts: PartsOf,
+                      identity: Submitter, name: Name = None) -> Any:
+    """Any accepted format (NPY, NPZ, CSV). The body is streamed to encrypted storage; once its digest agrees, the
+    rounds are read, checked, packed and counted. 201 means all of that is done and durable. Repeating the request is
+    harmless."""
     digest = content_digest(request)
     check_number(parts, number)
 
@@ -81,11 +85,12 @@ def list_segments(run: str, parts: PartsOf, identity: Anybody) -> Any:
     return {"segments": [_shown(row) for row in rows], "rounds": sum(row.rounds for row in rows)}
 
 
-@router.put("/{run}/seed", response_model=schemas.SeedReceipt, operation_id="upload_seed", summary="Upload the seed of a waiting run",
+@router.put("/{run}/seed", response_model=schemas.SeedReceipt, operation_id="upload_seed",
+            summary="Upload the seed of a waiting run",
             openapi_extra=_OCTETS, responses=documented(400, 401, 403, 404, 408, 409, 410, 413, 422, 503, 507))
 async def put_seed(run: str, request: Request, parts: PartsOf, identity: Submitter) -> Any:
-    """Exactly `seed.bits_needed` uniform bits of the run, packed from the least significant bit of each byte on, tail bits
-    zero. Nobody may have known them before the run was sealed."""
+    """Exactly `seed.bits_needed` uniform bits of the run, packed from the least significant bit of each byte on, tail
+    bits zero. Nobody may have known them before the run was sealed."""
     digest = content_digest(request)
 
     def look() -> RunRow:
@@ -110,15 +115,16 @@ async def put_seed(run: str, request: Request, parts: PartsOf, identity: Submitt
 
 
 @router.get("/{run}/seed", operation_id="read_seed", summary="The seed that was used", response_class=StreamingResponse,
-            responses={200: {"description": "the seed, packed", "content": {BINARY: {}}}, **documented(401, 403, 404, 409, 410)})
+            responses=sending(BINARY, "the seed, packed", 401, 403, 404, 409, 410))
 def get_seed(run: str, request: Request, parts: PartsOf, identity: Reader) -> Any:
     with parts.store.read() as reading:
         row = owned_run(reading, run, identity)
     if row.state in ("collected", "erased"):
         raise _erased()
     if row.seed_digest is None:
-        raise Conflict("the run has no seed (yet)", code="seed-pending" if row.state in ("open", "sealed", "working") else "no-seed",
-                       retry_after_s=parts.settings.poll_s if row.state in ("sealed", "working") else None)
+        working = row.state in ("sealed", "working")
+        code = "seed-pending" if working or row.state == "open" else "no-seed"
+        raise Conflict("the run has no seed (yet)", code=code, retry_after_s=parts.settings.poll_s if working else None)
     return _seed_file(request, parts, row, bytes.fromhex(row.seed_digest.removeprefix("sha256:")))
 
 

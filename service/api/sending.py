@@ -1,4 +1,4 @@
-"""Sending what lies in a vault file: whole or a byte range, with a strong ETag, stopping when the run's key is erased."""
+"""Sending what lies in a vault file: whole or a range, with a strong ETag, stopping when the run's key is erased."""
 
 from __future__ import annotations
 
@@ -18,7 +18,7 @@ PIECE_BYTES = 2**20
 
 def send_vault_file(request: Request, parts: Parts, run_id: str, file: BinaryIO, start: int, size: int, digest: bytes,
                     headers: Mapping[str, str]) -> Response:
-    """`size` bytes of an open vault file from byte `start` on, as the request's Range asks. Closes the file in any case."""
+    """`size` bytes of an open vault file from byte `start` on, as Range asks. Closes the file in any case."""
     etag = f'"sha256:{digest.hex()}"'
     told = {"ETag": etag, "Accept-Ranges": "bytes", "Cache-Control": "no-store", **headers}
     try:
@@ -32,7 +32,8 @@ def send_vault_file(request: Request, parts: Parts, run_id: str, file: BinaryIO,
     if wanted:
         told["Content-Range"] = f"bytes {first}-{last}/{size}"
     told["Content-Length"] = str(last - first + 1)
-    return StreamingResponse(_pieces(parts, run_id, file, start + first, last - first + 1), 206 if wanted else 200, told, BINARY)
+    return StreamingResponse(_pieces(parts, run_id, file, start + first, last - first + 1), 206 if wanted else 200,
+                             told, BINARY)
 
 
 def _pieces(parts: Parts, run_id: str, file: BinaryIO, start: int, left: int) -> Iterator[bytes]:

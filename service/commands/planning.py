@@ -166,7 +166,8 @@ def plan(args: argparse.Namespace) -> int:
                 raise
             refusals.append({"method": method, "code": fault.code, "detail": str(fault)})
     document = {"score": common["score"], "wanted_length": args.length, "plans": plans, "not_applicable": refusals}
-    emit(args, document, _plan_lines(args, document))
+    # One method asked for: its plan is the result. Several: a list of plans.
+    emit(args, document["plans"][0] | {"wanted_length": args.length} if args.method else document, _plan_lines(args, document))
     return DONE
 
 
@@ -185,14 +186,14 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
         ]
     )
     if plans:
-        lines += ["", f"{'method':<15}{'rounds':>18}{'expected bits':>18}{'reached surely':>18}{'order':>11}"]
+        lines += ["", f"{'method':<15}{'rounds':>18}{'expected bits':>18}{'reliable bits':>18}{'order':>11}"]
         for p in plans:
             order = f"{p['order']:.6f}" if p["order"] is not None else "-"
             lines.append(
                 f"{p['method']:<15}{grouped(p['rounds']):>18}{grouped(p['certified_length']):>18}"
                 f"{grouped(p['reliable_length']):>18}{order:>11}"
             )
-        lines += ["", f"reached surely: by an honest rig with probability {args.confidence:g}"]
+        lines += ["", f"reliable: reached by an honest rig with probability {args.confidence:g}"]
         if args.method:
             p = plans[0]
             lines += rows(

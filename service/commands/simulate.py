@@ -257,8 +257,8 @@ def simulate(args: argparse.Namespace) -> int:
 
 def _counted(batches: Iterator[RoundBatch], advance: Callable[[int], None]) -> Iterator[RoundBatch]:
     for batch in batches:
+        advance(batch.rounds)  # before handing on: nobody comes back after the last one
         yield batch
-        advance(batch.rounds)
 
 
 def split(batches: Iterator[RoundBatch], rounds: int, segments: int) -> Iterator[Iterator[RoundBatch]]:

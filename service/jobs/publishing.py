@@ -2,8 +2,8 @@
 
     report.json durable ──▶ ledger entry "result" with its digest ──▶ bundle.zip durable ──▶ certified | refused
 
-The report is written once: when its digest is in the ledger, a repeated stage takes it as it is. The bundle can always be
-made again from report and ledger, and is, when the collection has added entries.
+The report is written once: when its digest is in the ledger, a repeated stage takes it as it is. The bundle can always
+be made again from report and ledger, and is, when the collection has added entries.
 """
 
 from __future__ import annotations
@@ -52,8 +52,8 @@ def write_bundle(parts: Parts, run_id: str) -> None:
     data = parts.blobs.report_path(run_id).read_bytes()
     if canonical.bytes_digest(data) != row.report_digest:
         raise DamagedFile("the stored report is not the one in the ledger", code="report-damaged")
-    archive = bundle.build(canonical.parse(data), [(entry.index, entry.entry) for entry in entries], proofs, head.checkpoint,
-                           parts.ledger.signer)
+    numbered = [(entry.index, entry.entry) for entry in entries]
+    archive = bundle.build(canonical.parse(data), numbered, proofs, head.checkpoint, parts.ledger.signer)
     write_durably(parts.blobs.bundle_path(run_id), archive)
 
 
@@ -69,7 +69,8 @@ def _entries(reading: Reading, row: RunRow) -> list[LedgerEntryRow]:
 
 def _report(parts: Parts, row: RunRow) -> dict[str, Any]:
     with parts.store.read() as reading:
-        declaration, entries, segments = declaration_of(reading, row), _entries(reading, row), reading.list_segments(row.id)
+        declaration, segments = declaration_of(reading, row), reading.list_segments(row.id)
+        entries = _entries(reading, row)
     seed = output = None
     if row.certified_length:
         seed = {"source": row.seed_source, "bits": row.seed_bits, "digest": row.seed_digest}
@@ -77,9 +78,11 @@ def _report(parts: Parts, row: RunRow) -> dict[str, Any]:
     records = {"planes_digest": row.planes_digest, "segments": [
         {"segment": one.number, "digest": one.digest, "bytes": one.bytes, "format": one.format, "rounds": one.rounds,
          "no_clicks": list(one.no_clicks), "planes_digest": one.planes_digest} for one in segments]}
-    listed = [{"index": one.index, "kind": one.kind, "time": one.time, "digest": canonical.bytes_digest(one.entry)} for one in entries]
-    return build_report(row.id, declaration, entries[0].time, certificate_of(row), records, row.score or {}, row.diagnostics or [],
-                        seed, output, row.ledger_salt.hex(), listed, software())
+    listed = [{"index": one.index, "kind": one.kind, "time": one.time, "digest": canonical.bytes_digest(one.entry)}
+              for one in entries]
+    return build_report(
+        row.id, declaration, entries[0].time, certificate_of(row), records, row.score or {}, row.diagnostics or [],
+        seed, output, row.ledger_salt.hex(), listed, software())
 
 
 def software() -> dict[str, str]:

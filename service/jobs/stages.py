@@ -58,12 +58,14 @@ def tally(work: Work, row: RunRow) -> None:
             seen += batch.rounds
             work.progress(row, seen, row.sealed_rounds or 0)
         if own.hexdigest() != segment.planes_digest or counted.counts != segment.tally:
-            raise ProofError(f"the stored rounds of segment {segment.number} are not those that were received", code="segment-damaged")
+            raise ProofError(f"the stored rounds of segment {segment.number} are not those that were received",
+                             code="segment-damaged")
         total += counted
     if len(segments) != row.sealed_segments or total.rounds != row.sealed_rounds:
         raise ProofError(f"{len(segments)} segments with {total.rounds} rounds are stored, {row.sealed_segments} with "
                          f"{row.sealed_rounds} were sealed", code="segments-damaged")
-    work.advance(row, "certify", {"tally": total.counts, "planes_digest": whole.hexdigest(), **_look(declaration, total, segments)})
+    work.advance(row, "certify", {"tally": total.counts, "planes_digest": whole.hexdigest(),
+                                  **_look(declaration, total, segments)})
 
 
 def _look(declaration: Declaration, total: Tally, segments: list[SegmentRow]) -> dict[str, object]:
@@ -85,7 +87,8 @@ def _stored_batches(parts: Parts, run_id: str, segment: SegmentRow, first_block:
         with open_vault(parts.blobs.path(run_id, name), parts.keys.load(run_id), name) as file:
             yield from read_planes(file, first_block, name=f"segment {segment.number}")
     except FileNotFoundError:
-        raise DamagedFile(f"the stored rounds of segment {segment.number} are missing", code="segment-missing") from None
+        raise DamagedFile(f"the stored rounds of segment {segment.number} are missing",
+                          code="segment-missing") from None
     except InputError as fault:
         raise DamagedFile(f"the stored rounds of segment {segment.number} cannot be read: {fault.message}") from None
 
@@ -101,7 +104,8 @@ def certify(work: Work, row: RunRow) -> None:
         "certificate_commitment": certificate_commitment(row.ledger_salt, data), "outcome": certificate.outcome,
         "length": certificate.certified_length})
     work.advance(row, "seed" if certified else "publish", {
-        "certificate": data, "certified_length": certificate.certified_length, "available_bits": certificate.available_bits,
+        "certificate": data, "certified_length": certificate.certified_length,
+        "available_bits": certificate.available_bits,
         "seed_bits": certificate.seed_bits, "message": certificate.reason or ""}, [entry])
 
 
@@ -131,7 +135,8 @@ def draw_seed(work: Work, row: RunRow) -> None:
 
 def hash_rounds(work: Work, row: RunRow) -> None:
     """The bits: Toeplitz hash of both outcome planes, with partial sums stored on the way."""
-    parts, settings, declaration, certificate = work.parts, work.parts.settings, work.declaration(row), certificate_of(row)
+    parts, settings = work.parts, work.parts.settings
+    declaration, certificate = work.declaration(row), certificate_of(row)
     with parts.store.read() as reading:
         segments = reading.list_segments(row.id)
     key = parts.keys.load(row.id)
@@ -146,7 +151,8 @@ def hash_rounds(work: Work, row: RunRow) -> None:
         with open_vault(parts.blobs.path(row.id, SEED), key, SEED) as seed:
             _check_seed(work, row, seed)
             bits = pipeline.extract(
-                declaration, certificate, lambda first: _batches_from(parts, row.id, segments, first), SeedFile(seed, certificate.seed_bits),
+                declaration, certificate, lambda first: _batches_from(parts, row.id, segments, first),
+                SeedFile(seed, certificate.seed_bits),
                 resume=resume, on_partial=keep, partial_every_rounds=settings.partial_rounds,
                 on_progress=lambda done, total: work.progress(row, done, total, began),
                 threads=settings.hash_threads or os.cpu_count() or 1)
@@ -156,7 +162,8 @@ def hash_rounds(work: Work, row: RunRow) -> None:
     salt = hmac.digest(key, b"bellassay bits salt 1", "sha256")
     parts.blobs.need(len(bits))
     store_bits(parts, row.id, bits, salt, hashlib.sha256(bits).digest())
-    work.advance(row, "publish", {"bits_commitment": canonical.commitment(salt, bits), "backend": pipeline.backend_name(),
+    work.advance(row, "publish", {"bits_commitment": canonical.commitment(salt, bits),
+                                  "backend": pipeline.backend_name(),
                                   "hash_rounds": certificate.rounds})
 
 

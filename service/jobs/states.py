@@ -13,7 +13,8 @@ Stages while working, each durable when the next one begins, each repeatable fro
 
     tally ──▶ certify ──certified──▶ seed ──▶ hash ──▶ publish
                  └──────refused───────────────────────────▲
-    At seed a run whose declaration says "upload" waits (waiting_for = "seed", no lease) until PUT /seed has moved it to hash.
+    At seed a run whose declaration says "upload" waits (waiting_for = "seed", no lease) until PUT /seed has moved it
+    to hash.
 
 Certified, refused and failed are final for a watcher; only a collection goes on from certified.
 """
@@ -75,7 +76,8 @@ def move(transaction: Transaction, row: RunRow, state: str, changes: Mapping[str
 def record_seed(transaction: Transaction, ledger: Ledger, row: RunRow, source: str, digest: str, *,
                 changes: Mapping[str, Any] | None = None, holder: Any = ANY) -> bool:
     """The seed is durable: its ledger entry, and the run goes on to hash. False (and no change) as `move`."""
-    done = move(transaction, row, "working", {**(changes or {}), "seed_digest": digest, "attempts": 0}, stage="hash", holder=holder)
+    done = move(transaction, row, "working", {**(changes or {}), "seed_digest": digest, "attempts": 0}, stage="hash",
+                holder=holder)
     if done:
         ledger.append(transaction, "seed", row.id, {"source": source, "bits": row.seed_bits, "digest": digest},
                       ledger.time(transaction, now_text()))

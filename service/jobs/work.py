@@ -85,28 +85,33 @@ class Work:
     def record(self, row: RunRow, changes: Mapping[str, Any], entry: tuple[str, Mapping[str, Any]]) -> None:
         """A result within the stage of `row` and its ledger entry, in one transaction. Errors raised: LeaseLost."""
         with self.parts.store.write() as transaction:
-            self._must(transaction.update_run(row.id, {**changes, "attempts": 0}, state="working", stage=row.stage, holder=self.worker))
+            self._must(transaction.update_run(row.id, {**changes, "attempts": 0}, state="working", stage=row.stage,
+                                              holder=self.worker))
             self._append(transaction, [entry])
 
-    def advance(self, row: RunRow, stage: str, changes: Mapping[str, Any], entries: Sequence[tuple[str, Mapping[str, Any]]] = ()) -> None:
+    def advance(self, row: RunRow, stage: str, changes: Mapping[str, Any],
+                entries: Sequence[tuple[str, Mapping[str, Any]]] = ()) -> None:
         """The stage of `row` is done: its results, ledger entries and the next stage in one transaction."""
         self._commit(row, "working", stage, {**changes, **self.spent(row), "attempts": 0}, entries)
 
-    def finish(self, row: RunRow, state: str, changes: Mapping[str, Any], entries: Sequence[tuple[str, Mapping[str, Any]]] = ()) -> None:
+    def finish(self, row: RunRow, state: str, changes: Mapping[str, Any],
+               entries: Sequence[tuple[str, Mapping[str, Any]]] = ()) -> None:
         """The run is done: final state, and the lease given back."""
         self._commit(row, state, None, {**changes, **self.spent(row), "finished_time": now_text()}, entries)
 
     def wait_for_seed(self, row: RunRow) -> None:
         """The run waits for an upload: nobody holds it meanwhile."""
         with self.parts.store.write() as transaction:
-            moved = states.move(transaction, row, "working", {"attempts": 0}, stage=row.stage, waiting_for="seed", holder=self.worker)
+            moved = states.move(transaction, row, "working", {"attempts": 0}, stage=row.stage, waiting_for="seed",
+                                holder=self.worker)
             self._must(moved)
             transaction.release(row.id, self.worker)
 
     def record_seed(self, row: RunRow, digest: str) -> None:
         """The drawn seed is durable: ledger entry, and on to hash."""
         with self.parts.store.write() as transaction:
-            self._must(states.record_seed(transaction, self.parts.ledger, row, "system", digest, changes=self.spent(row), holder=self.worker))
+            self._must(states.record_seed(transaction, self.parts.ledger, row, "system", digest,
+                                          changes=self.spent(row), holder=self.worker))
 
     def spent(self, row: RunRow) -> dict[str, Any]:
         """The stage's seconds added to what earlier attempts at it took."""
@@ -123,7 +128,8 @@ class Work:
 
     def _append(self, transaction: Transaction, entries: Sequence[tuple[str, Mapping[str, Any]]]) -> None:
         for kind, body in entries:
-            self.parts.ledger.append(transaction, kind, self.run_id, body, self.parts.ledger.time(transaction, now_text()))
+            self.parts.ledger.append(transaction, kind, self.run_id, body,
+                                     self.parts.ledger.time(transaction, now_text()))
 
     @staticmethod
     def _must(moved: bool) -> None:

@@ -1,9 +1,12 @@
 """A worker process: claims runs, takes them through their stages, keeps the lease alive, and outlives no supervisor.
 
-    claim ─▶ stage, stage, ... ─▶ final or waiting      trouble of the run (damage)      ─▶ failed
-                                                        passing trouble (busy, disk full) ─▶ given back, tried again later
-                                                        a defect                          ─▶ the same, failed after some attempts
-                                                        the disk failed                   ─▶ the process ends
+    claim ─▶ stage, stage, ... ─▶ final or waiting
+
+    trouble of the run itself (damage)   ─▶ failed
+    passing trouble (busy, disk full)    ─▶ given back, tried again later
+    a defect                             ─▶ the same, and failed after some attempts
+    the disk failed                      ─▶ the process ends
+
     Killed at any point: the lease is free at once (the process is seen to be dead) or after lease_s, and the next
     claim goes on with the stage at hand.
 
@@ -76,7 +79,8 @@ class Worker:
         try:
             with Heartbeat(work):
                 if row.attempts > self.parts.settings.attempts:
-                    self._fail(work, f"given up after {row.attempts - 1} attempts without progress; the service's log says why", "too-many-attempts")
+                    tried = f"given up after {row.attempts - 1} attempts without progress"
+                    self._fail(work, f"{tried}; the service's log says why", "too-many-attempts")
                     return
                 self._stages(work)
         except LeaseLost:

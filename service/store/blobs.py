@@ -4,7 +4,7 @@
     data/runs/<id>/segments/<k>.planes     raw rounds        } vault files, encrypted under the run's key;
     data/runs/<id>/seed                    Toeplitz seed     } the vault name of each is its path within the
     data/runs/<id>/partial                 partial hash      } run's folder: "segments/3.planes", "seed", ...
-    data/runs/<id>/bits, bits.secrets      output; its digest and salt
+    data/runs/<id>/bits                    output, its salt and digest
     data/runs/<id>/report.json, bundle.zip  public documents, in the clear
 
 Nothing here encrypts: paths and rooms only.
@@ -12,6 +12,7 @@ Nothing here encrypts: paths and rooms only.
 
 from __future__ import annotations
 
+import contextlib
 import os
 import re
 import shutil
@@ -23,7 +24,7 @@ from service.errors import Unavailable
 from service.store.durable import TEMPORARY_SUFFIX, make_folder, storage_errors, sync_folder
 
 _ID = re.compile(r"[A-Za-z0-9][A-Za-z0-9_-]{0,63}", re.ASCII)
-SEED, PARTIAL, BITS, BITS_SECRETS = "seed", "partial", "bits", "bits.secrets"
+SEED, PARTIAL, BITS = "seed", "partial", "bits"
 
 
 def segment_name(number: int) -> str:
@@ -54,8 +55,8 @@ class Blobs:
         make_folder(self.folder(run_id) / "segments")
 
     def path(self, run_id: str, name: str) -> Path:
-        """Path of a vault file by its vault name: `segment_name(k)`, SEED, PARTIAL, BITS, BITS_SECRETS."""
-        if name not in (SEED, PARTIAL, BITS, BITS_SECRETS) and not re.fullmatch(r"segments/[1-9][0-9]*\.planes", name):
+        """Path of a vault file by its vault name: `segment_name(k)`, SEED, PARTIAL, BITS."""
+        if name not in (SEED, PARTIAL, BITS) and not re.fullmatch(r"segments/[1-9][0-9]*\.planes", name):
             raise Defect(f"{name!r} is no file of a run")
         return self.folder(run_id) / name
 
@@ -89,16 +90,25 @@ class Blobs:
         sync_folder(path.parent)
         return True
 
+    def discard(self, run_id: str) -> None:
+        """Removes the folders of a run that was never opened, as far as they are empty."""
+        for folder in (self.folder(run_id) / "segments", self.folder(run_id)):
+            with contextlib.suppress(OSError):
+                folder.rmdir()
+
     def remove_secrets(self, run_id: str) -> None:
         """Frees the room of a run's encrypted files once its key is erased; its documents stay. May be repeated."""
         folder = self.folder(run_id)
         if not folder.is_dir():
             return
         with storage_errors(folder):
-            for name in (SEED, PARTIAL, BITS, BITS_SECRETS):
+            for name in (SEED, PARTIAL, BITS):
                 (folder / name).unlink(missing_ok=True)
-            if (folder / "segments").is_dir():
-                shutil.rmtree(folder / "segments")
+            while (folder / "segments").is_dir():
+                try:
+                    shutil.rmtree(folder / "segments")
+                except FileNotFoundError:
+                    continue            # another process is at the same work
         sync_folder(folder)
 
     def sweep(self, older_than_s: float) -> int:

@@ -15,7 +15,7 @@ def test_the_demo_ends_with_verified_bits(tmp_path: Path) -> None:
     data = tmp_path / "a b"
     (data / "job-1").mkdir(parents=True)
     done = subprocess.run(
-        [sys.executable, ROOT / "deploy/demo.py", "--rounds", "300000", "--segments", "2", "--data", data],
+        [sys.executable, ROOT / "deploy/demo.py", "--rounds", "3000000", "--segments", "2", "--data", data],
         cwd=tmp_path,
         env={"PATH": "/usr/bin:/bin", "PYTHONPATH": str(ROOT)},
         capture_output=True,

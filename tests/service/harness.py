@@ -34,12 +34,14 @@ ALL_SCOPES = ("submit", "collect", "audit")
 
 def settings(folder: Path, **changed: Any) -> ServiceSettings:
     """Settings for tests: no room demanded, short waits, no workers."""
-    values = dict(data=folder / "data", port=0, free_disk_bytes=0, poll_s=0.05, event_poll_s=0.02, workers=0, retry_wait_s=0.0,
+    values = dict(data=folder / "data", port=0, free_disk_bytes=0, poll_s=0.05, event_poll_s=0.02, workers=0,
+                  retry_wait_s=0.0,
                   hash_threads=1)
     return ServiceSettings(**{**values, **changed})
 
 
-def make_token(parts: Parts, owner: str = "north", scopes: Sequence[str] = ALL_SCOPES, expires_s: float | None = None) -> str:
+def make_token(parts: Parts, owner: str = "north", scopes: Sequence[str] = ALL_SCOPES,
+               expires_s: float | None = None) -> str:
     with parts.store.write() as transaction:
         return new_token(transaction, owner=owner, scopes=scopes, label="", time=now_text(), expires_s=expires_s)[0]
 

@@ -108,7 +108,7 @@ def test_after_erasing_nothing_of_the_run_can_be_read(place: Blobs) -> None:
     keys, secret = keys_of(place), np.random.default_rng(5).bytes(4096)
     for run_id in ("r1", "r2"):
         place.make(run_id)
-        for name in (blobs.segment_name(1), blobs.SEED, blobs.PARTIAL, blobs.BITS, blobs.BITS_SECRETS):
+        for name in (blobs.segment_name(1), blobs.SEED, blobs.PARTIAL, blobs.BITS):
             write_vault(place.path(run_id, name), keys.create(run_id), name, secret)
     wrapped = (place.runs / "r1" / "run.key").read_bytes()
     assert keys.erase("r1") and not keys.erase("r1") and not keys.erase("never-was")

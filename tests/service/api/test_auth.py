@@ -10,12 +10,16 @@ from service.clock import now_s, now_text
 from tests.service.harness import Caller, Service, make_token, npz, problem
 
 BODIES = {
-    "POST /v1/declarations": {}, "POST /v1/runs": {"declaration": "d0"}, "POST /v1/plan": {"rounds": 1000, "score": 0.8, "soundness": 1e-3},
-    "POST /v1/runs/{run}/seal": {"segments": 1, "rounds": 1}, "POST /v1/runs/{run}/collection": {"digest": "sha256:" + "0" * 64},
+    "POST /v1/declarations": {}, "POST /v1/runs": {"declaration": "d0"}, 
+    "POST /v1/plan": {"rounds": 1000, "score": 0.8, "soundness": 1e-3},
+    "POST /v1/runs/{run}/seal": {"segments": 1, "rounds": 1},
+    "POST /v1/runs/{run}/collection": {"digest": "sha256:" + "0" * 64},
 }
 SCOPES = {
-    "POST /v1/declarations": ("submit",), "POST /v1/runs": ("submit",), "PUT /v1/runs/{run}/segments/{number}": ("submit",),
-    "POST /v1/runs/{run}/seal": ("submit",), "PUT /v1/runs/{run}/seed": ("submit",), "GET /v1/runs/{run}/seed": ("audit", "collect"),
+    "POST /v1/declarations": ("submit",), "POST /v1/runs": ("submit",),
+    "PUT /v1/runs/{run}/segments/{number}": ("submit",),
+    "POST /v1/runs/{run}/seal": ("submit",), "PUT /v1/runs/{run}/seed": ("submit",),
+    "GET /v1/runs/{run}/seed": ("audit", "collect"),
     "GET /v1/runs/{run}/certificate": ("audit", "collect"), "GET /v1/runs/{run}/report": ("audit", "collect"),
     "GET /v1/runs/{run}/bundle": ("audit", "collect"), "GET /v1/runs/{run}/bits": ("collect",),
     "POST /v1/runs/{run}/collection": ("collect",), "GET /metrics": ("audit",),
@@ -24,7 +28,8 @@ OPEN = ("GET /livez", "GET /readyz")
 
 
 def operations(service: Service) -> list[str]:
-    return [f"{method.upper()} {path}" for path, methods in service.app.openapi()["paths"].items() for method in methods]
+    return [f"{method.upper()} {path}" for path, methods in service.app.openapi()["paths"].items()
+            for method in methods]
 
 
 def call(caller: Caller, operation: str, run: str = "r0", declaration: str = "d0"):
@@ -38,7 +43,8 @@ def call(caller: Caller, operation: str, run: str = "r0", declaration: str = "d0
 def test_every_route_but_health_needs_a_token(service: Service) -> None:
     """Without a token, and with a wrong one, every route answers 401 with a challenge; health is open."""
     for operation in operations(service):
-        for caller, code in ((Caller(service.url, None), "token-missing"), (Caller(service.url, "bellassay_0_1"), "token-invalid")):
+        for caller, code in ((Caller(service.url, None), "token-missing"),
+                             (Caller(service.url, "bellassay_0_1"), "token-invalid")):
             answer = call(caller, operation)
             if operation in OPEN:
                 assert answer.status_code == 200
@@ -71,14 +77,15 @@ def test_scopes_open_exactly_their_routes(service: Service, scope: str) -> None:
 
 
 def test_objects_of_others_do_not_exist(service: Service, north: Caller) -> None:
-    """Every route about a run or declaration answers 404 to another owner, exactly as for an id that was never given."""
+    """Every route about a run or declaration answers another owner like for an id that was never given: 404."""
     declaration = north.declare()["id"]
     run = north.post("/v1/runs", {"declaration": declaration}).json()["id"]
     stranger = service.caller("south")
     tried = 0
     for operation in operations(service):
         if re.search(r"{(run|declaration)}", operation):
-            answers = [call(stranger, operation, run, declaration), call(stranger, operation, "r" + "0" * 16, "d" + "0" * 16)]
+            answers = [call(stranger, operation, run, declaration),
+                       call(stranger, operation, "r" + "0" * 16, "d" + "0" * 16)]
             bodies = [problem(answer, 404, "not-found") for answer in answers]
             assert bodies[0] == bodies[1]
             tried += 1

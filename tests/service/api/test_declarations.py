@@ -57,9 +57,11 @@ def test_other_kinds_and_sizes_of_bodies_are_refused(north: Caller) -> None:
     problem(north("POST", "/v1/declarations", data=b"{}", headers={"Content-Type": "text/plain"}), 415, "not-json")
     problem(north("POST", "/v1/declarations", data=b"{}"), 415, "not-json")
     large = b'{"purpose": "' + b"x" * 1_100_000 + b'"}'
-    problem(north("POST", "/v1/declarations", data=large, headers={"Content-Type": "application/json"}), 413, "upload-too-large")
+    problem(north("POST", "/v1/declarations", data=large, headers={"Content-Type": "application/json"}), 413,
+            "upload-too-large")
     pieces = (large[i:i + 65536] for i in range(0, len(large), 65536))
-    problem(north("POST", "/v1/declarations", data=pieces, headers={"Content-Type": "application/json"}), 413, "upload-too-large")
+    problem(north("POST", "/v1/declarations", data=pieces, headers={"Content-Type": "application/json"}), 413,
+            "upload-too-large")
 
 
 def test_unknown_addresses_and_methods_are_problems(north: Caller) -> None:
@@ -71,7 +73,7 @@ def test_unknown_addresses_and_methods_are_problems(north: Caller) -> None:
 
 
 def test_an_idempotency_key_makes_one_run(service: Service, north: Caller) -> None:
-    """The same request with the same key, also at the same time, opens one run; another request with the key is refused."""
+    """The same request with the same key opens one run, also at the same time; another request is refused."""
     declaration = north.declare()["id"]
     answers: list[requests.Response] = []
 
@@ -87,8 +89,10 @@ def test_an_idempotency_key_makes_one_run(service: Service, north: Caller) -> No
     assert {answer.status_code for answer in answers} == {201}
     assert len({answer.json()["id"] for answer in answers}) == 1
     other = north.declare()["id"]
-    problem(north.post("/v1/runs", {"declaration": other}, headers={"Idempotency-Key": "first-run"}), 422, "idempotency-key-reused")
-    assert service.caller("east").post("/v1/declarations", document(), headers={"Idempotency-Key": "first-run"}).status_code == 201
+    problem(north.post("/v1/runs", {"declaration": other}, headers={"Idempotency-Key": "first-run"}), 422,
+            "idempotency-key-reused")
+    assert service.caller("east").post("/v1/declarations", document(),
+                                       headers={"Idempotency-Key": "first-run"}).status_code == 201
     # The keys made for the runs that lost the race are gone again.
     folders = [path for path in service.parts.blobs.runs.iterdir() if (path / "run.key").exists()]
     with service.parts.store.read() as reading:
@@ -98,7 +102,8 @@ def test_an_idempotency_key_makes_one_run(service: Service, north: Caller) -> No
 def test_declaring_with_a_key_records_once(north: Caller) -> None:
     """A repeated declaration with a key gives the same id and one ledger entry."""
     size = north.get("/v1/ledger/entries").json()["size"]
-    first, second = (north.post("/v1/declarations", document(), headers={"Idempotency-Key": "d-key"}).json() for _ in range(2))
+    first, second = (north.post("/v1/declarations", document(), headers={"Idempotency-Key": "d-key"}).json()
+                     for _ in range(2))
     assert first == second
     assert north.get("/v1/ledger/entries").json()["size"] == size + 1
 

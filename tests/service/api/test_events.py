@@ -25,8 +25,8 @@ def test_events_tell_every_step_and_end(service: Service, north: Caller) -> None
     seen = stream(north, run)
     steps = [(state["state"], state["stage"]) for _, state in seen]
     distinct = [step for place, step in enumerate(steps) if step not in steps[:place]]
-    assert distinct == [("open", None), ("sealed", None), *(("working", stage) for stage in ("tally", "certify", "seed", "hash", "publish")),
-                        ("certified", None)]
+    stages = [("working", stage) for stage in ("tally", "certify", "seed", "hash", "publish")]
+    assert distinct == [("open", None), ("sealed", None), *stages, ("certified", None)]
     assert seen[-1][1] == north.get(f"/v1/runs/{run}").json()
 
 

@@ -7,12 +7,13 @@ import hashlib
 import io
 import json
 import threading
+from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
 from extractor.seal import canonical
 from extractor.seal.verify import verify_bundle
-from service.collection import finish_erasures
+from service.collection import erase, finish_erasures
 from service.jobs import states
 from tests.service.harness import ROUNDS, Caller, Service, digest_header, document, npz, problem, split_npz
 
@@ -51,7 +52,8 @@ def test_everything_is_verifiable_offline(north: Caller, run: str) -> None:
         trusted_key=north.get("/v1/ledger/key").text, say=lambda _: None)
     assert verdict.ok and not verdict.unchecked and verdict.run == run
     state = north.get(f"/v1/runs/{run}").json()
-    assert state["certified_length"] == verdict.certified_length and len(bits.content) == (verdict.certified_length + 7) // 8
+    assert state["certified_length"] == verdict.certified_length
+    assert len(bits.content) == (verdict.certified_length + 7) // 8
     assert state["seed"]["bits_needed"] == 2 * ROUNDS + verdict.certified_length - 1
 
 
@@ -77,7 +79,7 @@ def test_the_report_is_negotiated(north: Caller, run: str, accept: str, status: 
 
 
 def test_bits_in_ranges(north: Caller, run: str) -> None:
-    """Ranges put together are the whole; wrong ones are 416 with the size; If-Range of another state gives everything."""
+    """Ranges put together are the whole; wrong ones are 416; If-Range of another state gives everything."""
     path = f"/v1/runs/{run}/bits"
     whole = north.get(path)
     data, size = whole.content, len(whole.content)
@@ -145,7 +147,8 @@ def test_one_of_twenty_collectors_wins(service: Service, north: Caller) -> None:
     salt = bytes.fromhex(bits.headers["Bits-Salt"])
     assert entry["body"] == {"bits_commitment": canonical.commitment(salt, bits.content)}
     assert_erased(service, north, run)
-    verdict = verify_bundle(north.get(f"/v1/runs/{run}/bundle").content, bits=bits.content, bits_salt=salt, say=lambda _: None)
+    verdict = verify_bundle(north.get(f"/v1/runs/{run}/bundle").content, bits=bits.content, bits_salt=salt,
+                            say=lambda _: None)
     assert verdict.ok
 
 
@@ -167,12 +170,29 @@ def test_an_interrupted_erasure_is_finished(service: Service, north: Caller) -> 
     with service.parts.store.write() as transaction:
         row = transaction.get_run(run)
         assert states.move(transaction, row, "collected", {"collected_time": row.finished_time})
-        service.parts.ledger.append(transaction, "collection", run, {"bits_commitment": row.bits_commitment}, row.finished_time)
+        service.parts.ledger.append(transaction, "collection", run, {"bits_commitment": row.bits_commitment},
+                                    row.finished_time)
     problem(north.get(f"/v1/runs/{run}/bits"), 410, "bits-collected")
     assert service.parts.keys.exists(run)
     assert finish_erasures(service.parts) == 1
     assert_erased(service, north, run)
     assert finish_erasures(service.parts) == 0
+
+
+def test_many_may_finish_an_erasure(service: Service, north: Caller) -> None:
+    """The request that collected and idle workers may erase at the same time: one ledger entry, nothing left."""
+    run = north.sealed_run(files=split_npz(4_000))
+    service.work()
+    with service.parts.store.write() as transaction:
+        row = transaction.get_run(run)
+        states.move(transaction, row, "collected", {"collected_time": row.finished_time})
+        service.parts.ledger.append(transaction, "collection", run, {"bits_commitment": row.bits_commitment},
+                                    row.finished_time)
+    with ThreadPoolExecutor(6) as threads:
+        assert [*threads.map(lambda _: erase(service.parts, run), range(6))] == [None] * 6
+    assert_erased(service, north, run)
+    entries = [one["entry"] for one in north.get("/v1/ledger/entries").json()["entries"]]
+    assert [entry["kind"] for entry in entries if entry["subject"] == run][-2:] == ["collection", "erasure"]
 
 
 def test_a_refused_run_has_a_report_and_no_bits(service: Service, north: Caller) -> None:
@@ -187,7 +207,8 @@ def test_a_refused_run_has_a_report_and_no_bits(service: Service, north: Caller)
     problem(north.get(f"/v1/runs/{run}/bits"), 409, "no-bits")
     problem(north.get(f"/v1/runs/{run}/seed"), 409, "no-seed")
     problem(north.post(f"/v1/runs/{run}/collection", {"digest": "sha256:" + "0" * 64}), 409, "no-bits")
-    kinds = [one["entry"]["kind"] for one in north.get("/v1/ledger/entries").json()["entries"] if one["entry"]["subject"] == run]
+    kinds = [one["entry"]["kind"] for one in north.get("/v1/ledger/entries").json()["entries"]
+             if one["entry"]["subject"] == run]
     assert kinds == ["seal", "refusal", "result"]
 
 

@@ -1,4 +1,4 @@
-"""Seeds that are uploaded: refused before the seal and before the certificate, taken once, of exactly the right length."""
+"""Uploaded seeds: refused before seal and certificate, taken once, of exactly the right length."""
 
 from __future__ import annotations
 
@@ -45,8 +45,10 @@ def test_an_uploaded_seed_wakes_its_run(service: Service, north: Caller) -> None
     assert service.state(run) == "certified"
     assert north.put(path, bytes(seed)).status_code == 200
     output = north.get(f"/v1/runs/{run}/bits")
-    verdict = verify_bundle(north.get(f"/v1/runs/{run}/bundle").content, rounds=[(io.BytesIO(npz()), "rounds")], seed=io.BytesIO(seed),
-                            bits=output.content, bits_salt=bytes.fromhex(output.headers["Bits-Salt"]), say=lambda _: None)
+    verdict = verify_bundle(north.get(f"/v1/runs/{run}/bundle").content, rounds=[(io.BytesIO(npz()), "rounds")],
+                            seed=io.BytesIO(seed),
+                            bits=output.content, bits_salt=bytes.fromhex(output.headers["Bits-Salt"]),
+                            say=lambda _: None)
     assert "extraction" in dict(verdict.checks)
 
 

@@ -76,12 +76,13 @@ def _around(name: str, kind: str, where: str) -> None:
 def main(data: str, point: str, partial_rounds: int = 2**20) -> None:
     """A worker until nothing waits, or until `point`."""
     arm(point)
-    run_worker(ServiceSettings(data=Path(data), free_disk_bytes=0, poll_s=0.05, retry_wait_s=0.0, hash_threads=1, attempts=1000,
+    run_worker(ServiceSettings(data=Path(data), free_disk_bytes=0, poll_s=0.05, retry_wait_s=0.0, hash_threads=1,
+                               attempts=1000,
                                partial_rounds=partial_rounds), once=True)
 
 
 def start(data: Path, point: str) -> multiprocessing.Process:
-    """The worker as a process of its own; forked, because loading the program again would take longer than all its work."""
+    """The worker as a process of its own; forked, because loading the program takes longer than all its work."""
     process = multiprocessing.get_context("fork").Process(target=main, args=(str(data), point))
     process.start()
     return process

@@ -30,9 +30,11 @@ class SealedRuns:
 
     def make(self, files: Sequence[bytes] | None = None, **changed: Any) -> str:
         parts, body = self.parts, document(**changed)
+        digest, declaration_id = canonical.digest(body), new_id("d")
         with parts.store.write() as transaction:
-            index = parts.ledger.append(transaction, "declaration", identity := new_id("d"), {"digest": canonical.digest(body)}, now_text())
-            declared = transaction.insert_declaration(DeclarationRow(identity, "north", canonical.digest(body), now_text(), index, body))
+            index = parts.ledger.append(transaction, "declaration", declaration_id, {"digest": digest}, now_text())
+            declared = transaction.insert_declaration(
+                DeclarationRow(declaration_id, "north", digest, now_text(), index, body))
         run_id = new_id("r")
         prepare_run(parts, run_id)
         with parts.store.write() as transaction:

@@ -27,7 +27,8 @@ from tests.service.jobs import killed_worker
 from tests.service.harness import document, npz, opened, rounds, split_npz
 from tests.service.jobs.runs import SealedRuns, bits_of, damage, kinds_of, row_of, steps_of
 
-STEPS = [("open", None), ("sealed", None), *(("working", stage) for stage in ("tally", "certify", "seed", "hash", "publish")), ("certified", None)]
+STAGES = [("working", stage) for stage in ("tally", "certify", "seed", "hash", "publish")]
+STEPS = [("open", None), ("sealed", None), *STAGES, ("certified", None)]
 KINDS = ["seal", "certificate", "seed", "result"]
 LARGE = 2**21 + 50_001              # three blocks, so that partial hashes are stored
 
@@ -45,7 +46,8 @@ def expected_bits(parts: Parts, run: str, batches=None, **changed) -> bytes:
     batches = list(rebatch(rounds() if batches is None else batches))
     certificate = pipeline.certify(declaration, tally_batches(batches))
     seed = read_vault(parts.blobs.path(run, SEED), parts.keys.load(run), SEED)
-    return pipeline.extract(declaration, certificate, lambda first: batches[first // 2**20:], SeedBytes(seed, certificate.seed_bits))
+    return pipeline.extract(declaration, certificate, lambda first: batches[first // 2**20:],
+                            SeedBytes(seed, certificate.seed_bits))
 
 
 def assert_certified(parts: Parts, run: str) -> None:
@@ -89,7 +91,7 @@ def worker(folder: Path, point: str) -> int:
 
 @pytest.mark.parametrize("stage", ["tally", "certify", "seed", "hash", "publish"])
 def test_killed_in_a_stage(tmp_path: Path, parts: Parts, sealed, stage: str) -> None:
-    """Killed when a stage begins, before its commit, and after it: the next worker gives the same certificate and bits."""
+    """Killed when a stage begins, before its commit, or after it: the next worker gives the same results."""
     runs = {point: sealed() for point in (f"enter:{stage}", f"before-commit:{stage}", f"after-commit:{stage}")}
     for point in runs:
         # The longest waiting run comes first; the one killed before is finished on the way.
@@ -101,7 +103,7 @@ def test_killed_in_a_stage(tmp_path: Path, parts: Parts, sealed, stage: str) -> 
 
 
 def test_killed_again_and_again(tmp_path: Path, parts: Parts, sealed) -> None:
-    """Killed at each durable write in turn until it gets through: one certificate, one seed, one result in the ledger."""
+    """Killed at one durable write after the other: one certificate, one seed, one result in the ledger."""
     run = sealed()
     kills = 0
     while worker(tmp_path, f"write:{4 + kills % 4}") == -signal.SIGKILL:
@@ -142,7 +144,8 @@ def test_a_partial_of_another_seed_is_not_continued(parts: Parts, sealed) -> Non
     run = sealed()
     key = parts.keys.load(run)
     size = (row_bits(document()) + 7) // 8
-    write_vault(parts.blobs.path(run, PARTIAL), key, PARTIAL, b"bellassay partial 1" + bytes(32) + (2**20).to_bytes(8, "big") + bytes(size))
+    foreign = b"bellassay partial 1" + bytes(32) + (2**20).to_bytes(8, "big") + bytes(size)
+    write_vault(parts.blobs.path(run, PARTIAL), key, PARTIAL, foreign)
     Worker(parts).run(once=True)
     assert_certified(parts, run)
 
@@ -172,10 +175,12 @@ def replace(parts: Parts, run: str) -> None:
 
 
 @pytest.mark.parametrize("harm, code", [
-    (lambda parts, run: damage(parts, run, segment_name(2)), "damaged-file"), (shorten, "damaged-file"), (exchange, "damaged-file"),
+    (lambda parts, run: damage(parts, run, segment_name(2)), "damaged-file"), (shorten, "damaged-file"),
+    (exchange, "damaged-file"),
     (replace, "segment-damaged"), (lambda parts, run: parts.blobs.remove(run, segment_name(3)), "segment-missing"),
     (lambda parts, run: parts.keys.erase(run), "key-erased")])
-def test_damage_is_found_before_anything_is_certified(parts: Parts, sealed, harm: Callable[[Parts, str], object], code: str) -> None:
+def test_damage_is_found_before_anything_is_certified(parts: Parts, sealed, harm: Callable[[Parts, str], object],
+                                                      code: str) -> None:
     """Any change of the stored rounds fails the run with its code; no certificate, no seed, no bits."""
     run = sealed()
     harm(parts, run)

@@ -40,7 +40,8 @@ def broken(stage: str, fault: Exception, times: int, monkeypatch) -> list[int]:
     return entered
 
 
-@pytest.mark.parametrize("fault", [Unavailable("the disk is full", code="disk-full", retry_after_s=0.0), RuntimeError("a defect"), MemoryError()])
+@pytest.mark.parametrize("fault", [Unavailable("the disk is full", code="disk-full", retry_after_s=0.0),
+                                   RuntimeError("a defect"), MemoryError()])
 def test_passing_trouble_is_tried_again(parts: Parts, sealed, monkeypatch, fault: Exception) -> None:
     """What may pass (a full disk, a defect that comes and goes) gives the run back, and it goes on later."""
     run = sealed()
@@ -166,19 +167,22 @@ import sys
 from pathlib import Path
 from service.supervisor import serve
 from tests.service.harness import settings
-sys.exit(serve(settings(Path(sys.argv[1]), workers=1, poll_s=0.1, stop_s=10.0), on_listening=lambda url: print(url, flush=True)))
+chosen = settings(Path(sys.argv[1]), workers=1, poll_s=0.1, stop_s=10.0)
+sys.exit(serve(chosen, on_listening=lambda url: print(url, flush=True)))
 """
 
 
 def serving(folder: Path) -> subprocess.Popen:
-    child = subprocess.Popen([sys.executable, "-c", SERVE, str(folder)], cwd=ROOT, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL, text=True)
+    child = subprocess.Popen([sys.executable, "-c", SERVE, str(folder)], cwd=ROOT, stdout=subprocess.PIPE,
+                             stderr=subprocess.DEVNULL, text=True)
     assert child.stdout.readline().startswith("http://127.0.0.1:")
     return child
 
 
 def children_of(pid: int) -> list[int]:
     return [int(path.parent.name) for path in Path("/proc").glob("[0-9]*/stat")
-            if (text := read(path)) and int(text.rpartition(")")[2].split()[1]) == pid and text.rpartition(")")[2].split()[0] != "Z"]
+            if (text := read(path)) and int(text.rpartition(")")[2].split()[1]) == pid
+            and text.rpartition(")")[2].split()[0] != "Z"]
 
 
 def read(path: Path) -> str:
