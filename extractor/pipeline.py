@@ -10,10 +10,11 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
-from typing import BinaryIO
+from typing import Any, BinaryIO
 
 from extractor import tally as tallying
 from extractor.bell.diagnostics import Diagnostic, diagnose
+from extractor.bell.rigs import Rig as SimulatedRig
 from extractor.bell.score import Score, score
 from extractor.documents import tally_counts
 from extractor.entropy import behaviours, bound, planning
@@ -26,52 +27,39 @@ from extractor.seal import canonical
 
 check_declaration = bound.check_declaration
 certify = bound.certify
+plan = planning.plan
+compare = planning.compare
+rounds_for = planning.rounds_for
 
 
-def plan(**expectation_and_arguments) -> planning.Plan:
-    """The expected outcome of a run. One of score, calibration (Tally) or rig (`bell.rigs`) says what to expect; else as `entropy.planning.plan`."""
-    return planning.plan(**_expectation(expectation_and_arguments))
+def expect(*, score: float | None = None, calibration: Tally | None = None, model: SimulatedRig | None = None,
+           convention: Convention = Convention()) -> dict[str, Any]:
+    """What a rig may be expected to do, as arguments of `plan`, `compare`, `rounds_for` (score, and for factor-table behaviour).
+
+    Exactly one of an expected winning probability, a calibration tally (its likeliest quantum behaviour is taken) and a modelled rig.
+    """
+    if sum(value is not None for value in (calibration, model, score)) != 1:
+        raise InputError("give exactly one of a score, a calibration tally and a modelled rig", code="bad-usage", field="/score")
+    if score is not None:
+        return {"score": score}
+    if calibration is not None:
+        return {"score": planning.score_of(calibration, convention),
+                "behaviour": tuple(behaviours.of_tally(calibration).reshape(-1).tolist())}
+    tests = model.cell_probabilities()[1]
+    behaviour = tests / tests.sum(axis=(2, 3), keepdims=True)
+    return {"score": model.winning_probability, "behaviour": tuple(behaviour.reshape(-1).tolist())}
 
 
-def compare(**expectation_and_arguments) -> list[planning.Plan | InputError]:
-    """A plan per method, or the InputError that says why it does not apply; arguments as `plan` without method."""
-    return planning.compare(**_expectation(expectation_and_arguments))
-
-
-def rounds_for(length: int, **expectation_and_arguments) -> int:
-    """Fewest rounds whose expected certified length reaches `length` bits; arguments as `plan`, without rounds."""
-    return planning.rounds_for(length, **_expectation(expectation_and_arguments))
-
-
-def declare(*, calibration: Tally | None = None, **arguments) -> Declaration:
-    """A declaration for a rig known by a calibration tally, a modelled rig or an expected winning probability (exactly one of them).
+def declare(*, calibration: Tally | None = None, score: float | None = None, model: SimulatedRig | None = None, **arguments) -> Declaration:
+    """A declaration for a rig known by a calibration tally, an expected winning probability or a model (exactly one of them).
 
     The calibration's digest goes into the declaration. Arguments and errors otherwise as `entropy.planning.declare`.
     """
+    known = {"convention": arguments["convention"]} if "convention" in arguments else {}
+    expected = expect(score=score, calibration=calibration, model=model, **known)
     if calibration is not None:
         arguments |= {"calibration_digest": canonical.digest(tally_counts(calibration)), "calibration_rounds": calibration.rounds}
-    name = arguments.pop("rig")
-    model = arguments.pop("rig_model", None)
-    expected = _expectation(arguments | {"calibration": calibration, "rig": model})
-    return planning.declare(rig=name, **expected)
-
-
-def _expectation(arguments: dict) -> dict:
-    """The arguments with score, calibration or rig turned into what planning takes: score and, for factor-table, behaviour."""
-    arguments = dict(arguments)
-    calibration, rig = arguments.pop("calibration", None), arguments.pop("rig", None)
-    if sum(value is not None for value in (calibration, rig, arguments.get("score"))) != 1:
-        raise InputError("give exactly one of a score, a calibration tally and a modelled rig", code="bad-usage", field="/score")
-    convention = arguments.get("convention", Convention())
-    if calibration is not None:
-        arguments["score"] = planning.score_of(calibration, convention)
-        if arguments.get("method") in (None, "factor-table"):
-            arguments["behaviour"] = tuple(behaviours.of_tally(calibration).reshape(-1).tolist())
-    elif rig is not None:
-        tests = rig.cell_probabilities()[1]
-        behaviour = tests / tests.sum(axis=(2, 3), keepdims=True)
-        arguments["score"], arguments["behaviour"] = rig.winning_probability, tuple(behaviour.reshape(-1).tolist())
-    return arguments
+    return planning.declare(**expected, **arguments)
 
 
 def batches_of(files: Iterable[tuple[BinaryIO, str]], rules: RoundRules) -> Iterator[RoundBatch]:

@@ -270,6 +270,14 @@ def _reached(draft: Declaration, made: table_making.MadeTable, behaviour: table_
     return math.floor(made.credit_reached(draft.rounds, probability) + penalty - 1e-6)
 
 
+def _check_score(score: float) -> None:
+    if isinstance(score, bool) or not isinstance(score, (int, float)) or not 0.75 < score < search.TSIRELSON:
+        raise InputError(
+            f"a winning probability of {score!r} is not between the local bound 0.75 and the Tsirelson bound 0.853553…; "
+            "nothing can be certified at or below the local bound, and nothing quantum lies above the other",
+            code="score-out-of-range", field="/score")
+
+
 def _draft(common: dict[str, Any], output_rule: str, order: float | None, confidence: float) -> Declaration:
     """A declaration with table or acceptance rule chosen and the largest length; `confidence` places an eat threshold."""
     settings: Settings = common["settings"]

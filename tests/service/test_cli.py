@@ -238,7 +238,7 @@ def test_plan_compares_methods(capsys) -> None:
     for score in ("0.80", "0.84"):
         code, out, _ = run(capsys, "plan", "--rounds", "1e7", "--score", score, "--soundness", "1e-9", "--json")
         plans = {plan["method"]: plan["certified_length"] for plan in json.loads(out)["plans"]}
-        assert code == 0 and set(plans) == {"factor-closed", "eat-2018", "eat-2019"}
+        assert code == 0 and set(plans) == {"factor-table", "factor-closed", "eat-2018", "eat-2019"}
         lengths.append(plans["factor-closed"])
     assert 0 < lengths[0] < lengths[1]
 
@@ -275,7 +275,7 @@ def test_a_method_that_does_not_apply_is_listed_with_its_reason(capsys) -> None:
         capsys, "plan", "--rounds", "1e7", "--score", "0.8", "--soundness", "1e-9", "--output-rule", "credit", "--json"
     )
     result = json.loads(out)
-    assert code == 0 and [plan["method"] for plan in result["plans"]] == ["factor-closed"]
+    assert code == 0 and [plan["method"] for plan in result["plans"]] == ["factor-table", "factor-closed"]
     assert {item["method"] for item in result["not_applicable"]} == {"eat-2018", "eat-2019"}
 
 

@@ -56,7 +56,7 @@ def test_an_empty_ledger_answers(start) -> None:
 def test_planning(north: Caller) -> None:
     """Rounds give lengths per method, a length gives rounds, a calibration gives the score."""
     answer = north.post("/v1/plan", {"rounds": 10**8, "score": 0.8, "soundness": 1e-10}).json()
-    assert {plan["method"] for plan in answer["plans"]} == {"factor-closed", "eat-2018", "eat-2019"}
+    assert {plan["method"] for plan in answer["plans"]} == {"factor-table", "factor-closed", "eat-2018", "eat-2019"}
     assert all(plan["certified_length"] > 0 and plan["seed_bits"] > 0 for plan in answer["plans"])
     answer = north.post("/v1/plan", {"length": 1000, "score": 0.85, "soundness": 1e-3,
                                      "method": "factor-closed"}).json()
