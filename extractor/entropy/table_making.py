@@ -19,7 +19,7 @@ from extractor.entropy.validity import allowed_distributions
 from extractor.errors import Defect, InputError
 from extractor.model import SETTING_PAIRS, ScoreTable, Settings
 
-_SLACK_SHARE = 2e-3          # of the gain: what a certificate may cost
+_SLACK_SHARE = 1e-3          # of the gain: what a certificate may cost
 _LOWEST = 100.0              # bits: no cell is credited less than minus this, or minus 2 % of what the whole run earns
 _LIMIT_EXCESS = 1e-6         # order - 1 at which the i.i.d. limit is read off
 Behaviour = tuple[float, ...]

@@ -186,7 +186,7 @@ def flat_states(n: int) -> tuple[np.ndarray, np.ndarray]:
 
 def ascend(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bob: np.ndarray, steps: int,
            tolerance: float) -> tuple[np.ndarray, np.ndarray]:
-    """Mirror ascent ln rho <- ln rho + STEP * H with momentum on the trial states; nodes whose gap is below `tolerance` rest.
+    """Mirror ascent ln rho <- ln rho + STEP/order * H with momentum on the trial states; nodes whose gap is below `tolerance` rest.
 
     Momentum starts anew at a node whose value falls (Nesterov's method in the logarithm of the state).
     """
@@ -197,7 +197,8 @@ def ascend(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bo
     for _ in range(steps):
         h, _, _ = gradient(problem, some_p, some_v, alice[..., active], bob[..., active])
         reached = ((some_p[0] * h[0, 0] + some_p[1] * h[1, 1]) + some_p[2] * h[2, 2]) + some_p[3] * h[3, 3]
-        k = STEP * h
+        largest = np.maximum(np.maximum(np.abs(h[0, 0]), np.abs(h[1, 1])), np.maximum(np.abs(h[2, 2]), np.abs(h[3, 3])))
+        k = STEP / (1 + problem.e) * np.minimum(1.0, 40 / np.maximum(largest, 1.0)) * h       # no wild step from a poor state
         for i in range(4):
             k[i, i] = k[i, i] + log(some_p[i])
         plain = _conjugated(k, some_v.transpose(1, 0, 2))             # in the fixed basis

@@ -77,8 +77,8 @@ def best_local(problem: Problem) -> float:
 class _Nodes:
     """The nodes evaluated so far, by place."""
 
-    def __init__(self, problem: Problem, seeds: GridBound | None) -> None:
-        self.problem, self.seeds = problem, seeds
+    def __init__(self, problem: Problem) -> None:
+        self.problem = problem
         self.at: dict[int, int] = {}
         self.places = np.empty((2, 0), dtype=np.int64)
         self.upper, self.attained, self.stuck = np.empty(0), np.empty(0), np.empty(0, dtype=bool)
@@ -123,7 +123,7 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
     bound is infinite). Otherwise stops when the bound is within `tolerance` of the best strategy met. At most about
     `limit` nodes; what is reached by then is returned, sound in any case.
     """
-    nodes = _Nodes(problem, None)
+    nodes = _Nodes(problem)
     step = 1 << _FIRST
     line = np.arange(0, (1 << DEPTH) + 1, step)
     grid = np.array(np.meshgrid(line, line, indexing="ij")).reshape(2, -1)
@@ -169,4 +169,4 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
 
 
 def _result(nodes: _Nodes, bound: float) -> GridBound:
-    return GridBound(bound, float(np.max(nodes.attained)), len(nodes.upper), nodes.places, nodes.attained, nodes.p, nodes.v)
+    return GridBound(bound, max(best_local(nodes.problem), float(np.max(nodes.attained))), len(nodes.upper), nodes.places, nodes.attained, nodes.p, nodes.v)
