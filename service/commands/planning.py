@@ -96,7 +96,7 @@ def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> N
     )
     expectation.add_argument("--rig-visibility", type=real, metavar="V", help="modelled rig: visibility, 0 to 1 (default 1)")
     expectation.add_argument(
-        "--rig-efficiency", type=real, metavar="E", help="modelled rig: efficiency of both sides, 0 to 1 (default 1)"
+        "--rig-efficiency", type=real, metavar="ETA", help="modelled rig: efficiency of both sides, 0 to 1 (default 1)"
     )
     expectation.add_argument(
         "--rig-pair-probability", type=real, metavar="P", help="modelled rig: probability of a pair per round (default 1)"

@@ -67,6 +67,16 @@ def test_planning(north: Caller) -> None:
     assert abs(answer["score"] - 0.853) < 0.01
 
 
+def test_planning_a_modelled_rig(north: Caller) -> None:
+    """A rig model is an expectation like a score; the plan of factor-table carries its order, rate, validity bound and table."""
+    answer = north.post("/v1/plan", {"rounds": 10**6, "rig": {"visibility": 0.93}, "soundness": 1e-6, "order": 1.01,
+                                     "method": "factor-table"}).json()
+    (plan,) = answer["plans"]
+    assert plan["order"] == 1.01 and 1.04 < plan["rate"] < 1.06 and plan["validity_bound"] <= 1
+    assert plan["certified_length"] > 10**6 and len(plan["table"]["test"]) == 16
+    problem(north.post("/v1/plan", {"rounds": 10**6, "rig": {}, "score": 0.8, "soundness": 1e-6}), 422, "bad-usage")
+
+
 @pytest.mark.parametrize("change, code", [
     ({"score": 0.7}, "score-out-of-range"), ({"rounds": None}, "bad-usage"), ({"length": 5}, "bad-usage"),
     ({"score": None}, "bad-usage"),
