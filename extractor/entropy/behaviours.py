@@ -1,7 +1,10 @@
-"""What a rig is expected to do: outcome probabilities P(a, b | x, y) from a calibration tally or a score. For the search only.
+"""What a rig is expected to do: outcome probabilities P(a, b | x, y) from a calibration tally or a score. For the
+search only.
 
-Observed frequencies signal a little and may lie outside the quantum set, by chance; a table fitted to them would chase noise.
-So they are replaced by the quantum behaviour of largest likelihood: a mixture of two-qubit strategies, found like the table itself
+Observed frequencies signal a little and may lie outside the quantum set, by chance; a table fitted to them would
+chase noise.
+So they are replaced by the quantum behaviour of largest likelihood: a mixture of two-qubit strategies, found like the
+table itself
 (`table_search.best_factors`), strategies being added where the likelihood rises most.
 """
 
@@ -19,7 +22,8 @@ _PLACES = 24
 
 
 def of_score(score: float, convention: Convention) -> np.ndarray:
-    """Behaviour of a noisy singlet-like rig at this winning probability, (2, 2, 2, 2) indexed [x, y, a, b]: all four pairs alike, unbiased outcomes."""
+    """Behaviour of a noisy singlet-like rig at this winning probability, (2, 2, 2, 2) indexed [x, y, a, b]: all four
+    pairs alike, unbiased outcomes."""
     behaviour = np.empty((2, 2, 2, 2))
     for x, y in SETTING_PAIRS:
         for a, b in SETTING_PAIRS:
@@ -36,7 +40,8 @@ def of_tally(tally: Tally, generation: tuple[int, int] = (0, 0)) -> np.ndarray:
     counts = counts + np.array(tally.counts[:16], dtype=float).reshape(2, 2, 2, 2)
     for x, y in SETTING_PAIRS:
         if not counts[x, y].sum():
-            raise InputError(f"the calibration has no rounds at settings {x}{y}", code="empty-setting", field="/calibration")
+            raise InputError(f"the calibration has no rounds at settings {x}{y}", code="empty-setting",
+                    field="/calibration")
     total = counts.sum()
     counts = counts + _PSEUDO_COUNT
     nu = (counts / counts.sum()).reshape(16)
@@ -56,7 +61,8 @@ def of_tally(tally: Tally, generation: tuple[int, int] = (0, 0)) -> np.ndarray:
 
 
 def _worst(coefficients: np.ndarray) -> tuple[float, np.ndarray]:
-    """(largest quantum value of a Bell expression, behaviours (n, 2, 2, 2, 2) of its local maxima); coefficients indexed [x, y, a, b]."""
+    """(largest quantum value of a Bell expression, behaviours (n, 2, 2, 2, 2) of its local maxima); coefficients
+    indexed [x, y, a, b]."""
     line = np.linspace(0, 1, _PLACES + 1)
     angles = np.array(np.meshgrid(line, line, indexing="ij")).reshape(2, -1)
     values, _ = _values(coefficients, angles)

@@ -4,7 +4,8 @@ Only operations are used that IEEE 754 rounds correctly (+ - * / and the square 
 rint, comparison). numpy applies each to one array element at a time, so neither a C library, a linear algebra library
 nor the width of a vector unit can change a result. No sum is left to a library: sums are written out.
 
-U is half the distance from 1 to the next float. Errors are stated for arguments met here and were compared with 40-digit
+U is half the distance from 1 to the next float. Errors are stated for arguments met here and were compared with
+40-digit
 arithmetic in the tests.
 """
 
@@ -53,7 +54,8 @@ def expm1(x: np.ndarray) -> np.ndarray:
 
 
 def quarter_turn(fraction: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """cos and sin of fraction * pi/2, 0 <= fraction <= 1 with few digits (1 - fraction exact): absolute error below 4 U."""
+    """cos and sin of fraction * pi/2, 0 <= fraction <= 1 with few digits (1 - fraction exact): absolute error below 4
+    U."""
     swap = fraction > 0.5
     angle = np.where(swap, 1 - fraction, fraction) * _HALF_PI
     square = angle * angle
@@ -61,11 +63,13 @@ def quarter_turn(fraction: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     return np.where(swap, s, c), np.where(swap, c, s)
 
 
-_ROUNDS = (((0, 2), (1, 3)), ((0, 1), (2, 3)), ((0, 1), (3, 2)))     # (first of each pair), (second): two disjoint pairs at a time
+_ROUNDS = (((0, 2), (1, 3)), ((0, 1), (2, 3)),
+        ((0, 1), (3, 2)))     # (first of each pair), (second): two disjoint pairs at a time
 
 
 def rotate_towards_diagonal(k: np.ndarray, v: np.ndarray, sweeps: int) -> None:
-    """Jacobi sweeps on symmetric 4x4 matrices k (4, 4, nodes), in place; v (4, 4, nodes) becomes v times the rotation."""
+    """Jacobi sweeps on symmetric 4x4 matrices k (4, 4, nodes), in place; v (4, 4, nodes) becomes v times the
+    rotation."""
     for _ in range(sweeps):
         for left, right in _ROUNDS:
             left, right = list(left), list(right)

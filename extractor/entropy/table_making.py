@@ -43,7 +43,8 @@ class MadeTable:
     lost: float
 
     def credit_reached(self, rounds: int, probability: float) -> float:
-        """About the credit that an honest run of `rounds` rounds reaches with this probability (Cornish-Fisher, to the skewness)."""
+        """About the credit that an honest run of `rounds` rounds reaches with this probability (Cornish-Fisher, to
+        the skewness)."""
         z = NormalDist().inv_cdf(1 - probability)
         shape = z + (z * z - 1) * self.skewness / (6 * math.sqrt(rounds))
         return rounds * self.rate + shape * self.deviation * math.sqrt(rounds)
@@ -55,7 +56,8 @@ def frequencies(behaviour: Behaviour, settings: Settings) -> np.ndarray:
     tests = settings.test_probability * np.array(settings.distribution)[:, None] * p
     if settings.test_probability == 1:
         return tests.reshape(-1)
-    return np.concatenate([tests.reshape(-1), (1 - settings.test_probability) * p[SETTING_PAIRS.index(tuple(settings.generation))]])
+    return np.concatenate([tests.reshape(-1),
+            (1 - settings.test_probability) * p[SETTING_PAIRS.index(tuple(settings.generation))]])
 
 
 def _layout(settings: Settings) -> Layout:
@@ -65,7 +67,8 @@ def _layout(settings: Settings) -> Layout:
 
 
 def _positive(behaviour: Behaviour, settings: Settings) -> np.ndarray:
-    """Frequencies with a tiny share of noise: no cell is expected never, so no credit is infinite and no loss unbounded."""
+    """Frequencies with a tiny share of noise: no cell is expected never, so no credit is infinite and no loss
+    unbounded."""
     noise = 1e-12
     mixed = (1 - noise) * np.array(behaviour) + noise / 4
     return frequencies(tuple(mixed), settings)
@@ -78,15 +81,18 @@ def _search(behaviour: Behaviour, settings: Settings, rounds_scale: int) -> Sear
 
 
 @lru_cache(maxsize=64)
-def make_table(behaviour: Behaviour, settings: Settings, rounds: int, soundness: float, order: float | None) -> MadeTable:
-    """The table (and, unless given, the order) for a run of `rounds` rounds. Raises InputError if nothing can be earned.
+def make_table(behaviour: Behaviour, settings: Settings, rounds: int, soundness: float,
+        order: float | None) -> MadeTable:
+    """The table (and, unless given, the order) for a run of `rounds` rounds. Raises InputError if nothing can be
+    earned.
 
     behaviour  16 probabilities P(a, b | x, y), index 8 x + 4 y + 2 a + b
     """
     search = _search(behaviour, settings, max(rounds, 1).bit_length())
     e, factors, gain = table_search.best_table(search, rounds, -math.log2(soundness), order)
     if not gain > 0:
-        raise InputError("no score table earns anything for a rig that behaves like this: it shows no violation", code="nothing-to-certify",
+        raise InputError("no score table earns anything for a rig that behaves like this: it shows no violation",
+                code="nothing-to-certify",
                          field="/calibration")
     credits = np.log2(factors) / e
     slack = 0.0
@@ -121,16 +127,20 @@ def _made(table: ScoreTable, behaviour: Behaviour, settings: Settings, slack: fl
 
 @lru_cache(maxsize=64)
 def limit_rate(behaviour: Behaviour, settings: Settings) -> float:
-    """About the i.i.d. limit of a behaviour, in bits per round: two-sided von Neumann entropy, its least value over all quantum strategies.
+    """About the i.i.d. limit of a behaviour, in bits per round: two-sided von Neumann entropy, its least value over
+    all quantum strategies.
 
-    Read off a search at order 1 + 1e-6; a searched number, good to about one part in a thousand, that certifies nothing.
+    Read off a search at order 1 + 1e-6; a searched number, good to about one part in a thousand, that certifies
+    nothing.
     """
     search = Search.of(_positive(behaviour, settings), _layout(settings), -1e9)
     return max(search.improve(_LIMIT_EXCESS, 20, 1e-3)[1], 0.0)
 
 
-def searched_length(behaviour: Behaviour, settings: Settings, rounds: int, soundness: float, order: float | None) -> float:
-    """About the bits that `rounds` rounds would earn after the cost of soundness; quick after the first call. For planning."""
+def searched_length(behaviour: Behaviour, settings: Settings, rounds: int, soundness: float,
+        order: float | None) -> float:
+    """About the bits that `rounds` rounds would earn after the cost of soundness; quick after the first call. For
+    planning."""
     search = _search(behaviour, settings, 40)
     cost = -math.log2(soundness)
     for _ in range(8):

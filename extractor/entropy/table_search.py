@@ -1,10 +1,16 @@
-"""Looks for the score table that earns an expected rig the most. Trusted for nothing: `two_sided_grid` certifies what is found.
+"""Looks for the score table that earns an expected rig the most. Trusted for nothing: `two_sided_grid` certifies what
+is found.
 
-The programme. With expected frequencies nu(k) of the cells and R_s(k) what strategy s makes of cell k (settings' probability
-times Rényi power), maximise sum_k nu(k) ln F(k) subject to sum_k R_s(k) F(k) <= 1 for all s. Its dual is a fit of nu by a mixture of
-strategies: F = nu/mu, mu = sum_s l_s R_s, and the gain is the divergence of nu from mu. Strategies are added where the present table is
-exceeded most (cutting planes): the worst places of a grid, moved uphill, and the certifier's own worst nodes. The inner programme is
-solved by a primal-dual interior-point method in the scale d(ln F) * sqrt(nu), in which the curvature of the goal is 1 in every
+The programme. With expected frequencies nu(k) of the cells and R_s(k) what strategy s makes of cell k (settings'
+probability
+times Rényi power), maximise sum_k nu(k) ln F(k) subject to sum_k R_s(k) F(k) <= 1 for all s. Its dual is a fit of nu
+by a mixture of
+strategies: F = nu/mu, mu = sum_s l_s R_s, and the gain is the divergence of nu from mu. Strategies are added where
+the present table is
+exceeded most (cutting planes): the worst places of a grid, moved uphill, and the certifier's own worst nodes. The
+inner programme is
+solved by a primal-dual interior-point method in the scale d(ln F) * sqrt(nu), in which the curvature of the goal is 1
+in every
 direction, so that cells of probability 1e-8 and 1/4 are treated alike.
 """
 
@@ -37,7 +43,8 @@ class Strategies:
         return cls(np.empty((4, 0)), np.empty((4, 4, 0)), np.empty((2, 0)))
 
     def joined(self, p: np.ndarray, v: np.ndarray, angles: np.ndarray) -> Strategies:
-        return Strategies(np.concatenate([self.p, p], 1), np.concatenate([self.v, v], 2), np.concatenate([self.angles, angles], 1))
+        return Strategies(np.concatenate([self.p, p], 1), np.concatenate([self.v, v], 2),
+                np.concatenate([self.angles, angles], 1))
 
     def kept(self, which: np.ndarray) -> Strategies:
         return Strategies(self.p[:, which], self.v[:, :, which], self.angles[:, which])
@@ -62,7 +69,8 @@ def deterministic() -> np.ndarray:
 
 @dataclass(frozen=True)
 class Layout:
-    """How settings probabilities turn Rényi powers into rows of 16 test cells and, if there are generation rounds, 4 more.
+    """How settings probabilities turn Rényi powers into rows of 16 test cells and, if there are generation rounds, 4
+    more.
 
     distributions  (e, 4): the allowed test distributions, each gives a row
     """
@@ -78,7 +86,8 @@ class Layout:
         if self.gamma == 1:
             return flat
         generation = (1 - self.gamma) * powers[:, self.generation[0], self.generation[1]].reshape(-1, 1, 4)
-        return np.concatenate([flat, np.broadcast_to(generation, (len(powers), len(self.distributions), 4)).reshape(-1, 4)], axis=1)
+        return np.concatenate([flat,
+                np.broadcast_to(generation, (len(powers), len(self.distributions), 4)).reshape(-1, 4)], axis=1)
 
     def problems(self, factors: np.ndarray, e: float) -> list[Problem]:
         """The certification problems of a table, one per allowed distribution."""
@@ -94,8 +103,10 @@ class Layout:
         return found
 
 
-def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float, least: float = 0.0) -> tuple[np.ndarray, np.ndarray]:
-    """(F, multipliers of the rows): maximise sum nu ln F subject to rows @ F <= 1 and F >= least, to about `accuracy` in the goal."""
+def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float, least: float = 0.0) -> tuple[np.ndarray,
+        np.ndarray]:
+    """(F, multipliers of the rows): maximise sum nu ln F subject to rows @ F <= 1 and F >= least, to about `accuracy`
+    in the goal."""
     strategies, root = len(rows), np.sqrt(nu)
     limits = np.ones(strategies)
     if least:
@@ -136,7 +147,8 @@ def best_factors(nu: np.ndarray, rows: np.ndarray, accuracy: float, least: float
 
 
 def _newton(rows: np.ndarray, ratios: np.ndarray) -> Callable[[np.ndarray, np.ndarray], tuple[np.ndarray, np.ndarray]]:
-    """Solver of y + rows^T l = top, rows y - ratios l = bottom: whole if small, else through y alone (a little less exact)."""
+    """Solver of y + rows^T l = top, rows y - ratios l = bottom: whole if small, else through y alone (a little less
+    exact)."""
     n, m = rows.shape[1], len(rows)
     if m <= 250:
         k = np.zeros((n + m, n + m))
@@ -169,26 +181,31 @@ class Oracle:
         values = np.empty(self.angles.shape[1])
         for begin in range(0, len(values), 320):
             part = slice(begin, begin + 320)
-            self.p[:, part], self.v[:, :, part], values[part] = _climb(problem, self.p[:, part], self.v[:, :, part], self.angles[:, part], self.steps)
+            self.p[:, part], self.v[:, :, part], values[part] = _climb(problem, self.p[:, part], self.v[:, :, part],
+                    self.angles[:, part], self.steps)
         self.steps = 8
         square = values.reshape(_BASE + 1, _BASE + 1)
         around = np.full((_BASE + 3, _BASE + 3), -np.inf)
         around[1:-1, 1:-1] = square
-        top = np.max([around[1 + di:_BASE + 2 + di, 1 + dj:_BASE + 2 + dj] for di in (-1, 0, 1) for dj in (-1, 0, 1)], axis=0)
+        top = np.max([around[1 + di:_BASE + 2 + di, 1 + dj:_BASE + 2 + dj] for di in (-1, 0, 1) for dj in (-1, 0, 1)],
+                axis=0)
         peaks = np.flatnonzero((square >= top).reshape(-1))
         peaks = peaks[np.argsort(-values[peaks])][:count]
         return _refined(problem, self.p[:, peaks], self.v[:, :, peaks], self.angles[:, peaks])
 
 
-def _climb(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray, steps: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+def _climb(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray, steps: int) -> tuple[np.ndarray,
+        np.ndarray, np.ndarray]:
     alice, bob = two_sided.directions(angles[0]), two_sided.directions(angles[1])
     p, v = two_sided.ascend(problem, p, v, alice, bob, steps, 1e-9)
     h, _, _ = two_sided.gradient(problem, p, v, alice, bob)
     return p, v, sum(p[i] * h[i, i] for i in range(4))
 
 
-def _refined(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """Moves each strategy's angles uphill: a 3 by 3 stencil, its quadratic fit, and a third of the step, seven times."""
+def _refined(problem: Problem, p: np.ndarray, v: np.ndarray, angles: np.ndarray) -> tuple[np.ndarray, np.ndarray,
+        np.ndarray, np.ndarray]:
+    """Moves each strategy's angles uphill: a 3 by 3 stencil, its quadratic fit, and a third of the step, seven
+    times."""
     n, h = angles.shape[1], 0.5 / _BASE
     offsets = np.array([(di, dj) for di in (-1, 0, 1) for dj in (-1, 0, 1)], dtype=float).T           # (2, 9)
     values = np.full(n, -np.inf)
@@ -271,8 +288,10 @@ class Search:
         return best_in_log(lambda e: rounds * self.fit(e)[1] - cost / e, low, 1.0, points=15)
 
 
-def best_table(search: Search, rounds: int, cost: float, order: float | None, relative: float = 1e-3) -> tuple[float, np.ndarray, float]:
-    """(e, F, gain in bits per round) for a run of `rounds` rounds that pays cost * order/(order - 1) bits; order None = search for it."""
+def best_table(search: Search, rounds: int, cost: float, order: float | None, relative: float = 1e-3) -> tuple[float,
+        np.ndarray, float]:
+    """(e, F, gain in bits per round) for a run of `rounds` rounds that pays cost * order/(order - 1) bits; order None
+    = search for it."""
     if order is not None:
         e = order - 1
         return e, *search.improve(e, 20, relative)

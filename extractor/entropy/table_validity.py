@@ -1,7 +1,9 @@
 """Is a declared general score table valid? Yes or no, the same answer on every machine.
 
-Trusted. A table is valid when no quantum strategy has a weighted sum above 1 (MATH section 3); the bound is `two_sided_grid`'s, the derivation
-TABLES.md. The declaration holds a table already divided by what its sum exceeded 1 by, so a certificate prints no digit of the
+Trusted. A table is valid when no quantum strategy has a weighted sum above 1 (MATH section 3); the bound is
+`two_sided_grid`'s, the derivation
+TABLES.md. The declaration holds a table already divided by what its sum exceeded 1 by, so a certificate prints no
+digit of the
 bound: it says that the sum is at most 1, or there is no certificate.
 """
 
@@ -25,7 +27,8 @@ LARGEST_FACTOR = 40          # bits: a factor F = 2^((order - 1) credit) is at m
 def problems(table: ScoreTable, settings: Settings) -> list[Problem]:
     """One certification problem per extreme point of the allowed settings distributions; factors rounded up.
 
-    Generation rounds use the outcome vectors of their settings, so their weight and factors join those test cells (TABLES.md 1).
+    Generation rounds use the outcome vectors of their settings, so their weight and factors join those test cells
+    (TABLES.md 1).
     """
     with exactly():
         e, gamma = number(table.order) - 1, number(settings.test_probability)
@@ -49,12 +52,14 @@ def _excess(credit: float, e: Decimal) -> Decimal:
     """(F - 1)/e for F = 2^(e credit)."""
     exponent = e * number(credit)
     if exponent > LARGEST_FACTOR:
-        raise InputError(f"a credit of {credit!r} bits makes a factor above 2^{LARGEST_FACTOR} at this order", code="bad-table", field="/table")
+        raise InputError(f"a credit of {credit!r} bits makes a factor above 2^{LARGEST_FACTOR} at this order",
+                code="bad-table", field="/table")
     return (exp2(exponent) - 1) / e
 
 
 def check_valid(table: ScoreTable, settings: Settings) -> float:
-    """Upper bound, at most 0, on the excess (sum - 1)/(order - 1) of the table over all quantum strategies and allowed settings distributions.
+    """Upper bound, at most 0, on the excess (sum - 1)/(order - 1) of the table over all quantum strategies and
+    allowed settings distributions.
 
     Raises InputError if it could not be shown to be at most 0.
     """

@@ -2,12 +2,13 @@
 
 Trusted: `upper_bounds`. Derivations: TABLES.md beside this file, sections 2 (fixed angles) and 4 (rounding).
 
-Cells of this module are (x, a, y, b); w[x, y] is the weight of a setting pair (the weights add up to 1) and 1 + e d[x, a, y, b] the factor of a cell,
-e = order - 1. All numbers are kept relative to 1 in units of e, so that nothing is lost when the order is close to 1:
-a strategy's weighted sum is 1 + e v, and v <= 0 is validity. Only arithmetic of `portable` is used.
+Cells of this module are (x, a, y, b); w[x, y] is the weight of a setting pair (the weights add up to 1) and
+1 + e d[x, a, y, b] the factor of a cell, e = order - 1. All numbers are kept relative to 1 in units of e, so that
+nothing is lost when the order is close to 1: a strategy's weighted sum is 1 + e v, and v <= 0 is validity.
+Only arithmetic of `portable` is used.
 
-Shapes: n nodes stand last. p (4, n) > 0 and v (4, 4, n): eigenvalues and eigenvectors (columns) of the trial state rho0,
-basis |Alice Bob> = 00, 01, 10, 11. directions (2, 2, 2, n): [setting, outcome, component] of one side.
+Shapes: n nodes stand last. p (4, n) > 0 and v (4, 4, n): eigenvalues and eigenvectors (columns) of the trial state
+rho0, basis |Alice Bob> = 00, 01, 10, 11. directions (2, 2, 2, n): [setting, outcome, component] of one side.
 """
 
 from __future__ import annotations
@@ -26,7 +27,12 @@ STEP = 1.0                # of the ascent
 
 @dataclass(frozen=True)
 class Problem:
-    """weights (2, 2) indexed [x, y], adding up to 1; excess d (2, 2, 2, 2) indexed [x, a, y, b], d >= -1/e; e = order - 1 in (0, 1]."""
+    """A table under one settings distribution: what is to be bounded.
+
+    weights  w (2, 2) indexed [x, y], adding up to 1
+    excess   d (2, 2, 2, 2) indexed [x, a, y, b], d >= -1/e: the factor of a cell is 1 + e d
+    e        order - 1, in (0, 1]
+    """
 
     weights: np.ndarray
     excess: np.ndarray
@@ -46,13 +52,15 @@ def directions(fraction: np.ndarray) -> np.ndarray:
 
 def _components(v: np.ndarray, alice: np.ndarray, bob: np.ndarray) -> np.ndarray:
     """<m_xayb|e_i>, shape (2, 2, 2, 2, 4, n)."""
-    half = alice[:, :, 0, None, None] * v[0:2] + alice[:, :, 1, None, None] * v[2:4]            # [x, a, Bob's basis, i, n]
+    # half is indexed [x, a, component of Bob, i, n]
+    half = alice[:, :, 0, None, None] * v[0:2] + alice[:, :, 1, None, None] * v[2:4]
     return (half[:, :, None, None, 0] * bob[None, None, :, :, 0, None]
             + half[:, :, None, None, 1] * bob[None, None, :, :, 1, None])
 
 
-def gradient(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bob: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
-    """(H, rounding, largest factor): H = (gradient of f at rho0 - 1)/e in the eigenbasis of rho0, (4, 4, n).
+def gradient(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray,
+             bob: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """(H, rounding, size): H = (gradient of f at rho0 - 1)/e in the eigenbasis of rho0, (4, 4, n).
 
     rounding (n,): bound on the spectral norm of the error of H, given V within `_V_DEFECT` of orthogonality.
     """
@@ -69,7 +77,8 @@ def gradient(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, 
     weighted = (a * problem.weights[:, None, :, None, None]).reshape(16, 1, -1)
     rows = m.reshape(16, 4, -1)
     first, second = (0, 0, 0, 0, 1, 1, 1, 2, 2, 3), (0, 1, 2, 3, 1, 2, 3, 2, 3, 3)
-    sums = np.concatenate([_sum16(weighted * rows[:, i:i + 1] * rows[:, i:]) for i in range(4)])      # sum_k w a m_i m_j
+    # sum_k w a m_i m_j for the ten pairs i <= j
+    sums = np.concatenate([_sum16(weighted * rows[:, i:i + 1] * rows[:, i:]) for i in range(4)])
     g = _slope_of_power(p.take(first, 0), p.take(second, 0), log_p.take(first, 0), log_p.take(second, 0), e)
     same = np.array([float(i == j) for i, j in zip(first, second)])[:, None]
     entries = sums + g * (same + e * sums)
@@ -77,7 +86,8 @@ def gradient(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, 
     for entry, i, j in zip(entries, first, second):
         h[i, j] = h[j, i] = entry
     largest_g = np.max(np.abs(g), axis=0)
-    factor = (1 + e) * (1 + e * problem.largest) * (1 + e * np.max(np.abs(t_power).reshape(16, -1), axis=0)) * (1 + e * largest_g)
+    factor = (1 + e) * (1 + e * problem.largest) * (1 + e * np.max(np.abs(t_power).reshape(16, -1),
+            axis=0)) * (1 + e * largest_g)
     size = (factor - 1) / e
     rounding = 4 * ((800 * U + 8 * _ENTRY) * (size + 1) * (1 + e * largest_g) + 8 * _ENTRY * factor / np.sqrt(lowest))
     return h, rounding, size
@@ -131,7 +141,8 @@ def _dot(a: np.ndarray, b: np.ndarray) -> np.ndarray:
     return ((a[0] * b[0] + a[1] * b[1]) + a[2] * b[2]) + a[3] * b[3]
 
 
-def upper_bounds(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bob: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def upper_bounds(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray,
+        bob: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """(upper, attained), both (n,), in units of e above 1.
 
     upper     no two-qubit strategy at these angles has a weighted sum above 1 + e upper, whatever p > 0 and v are;
@@ -146,7 +157,8 @@ def upper_bounds(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarr
     shift = 1e-12 * (1 + size)
     top = guess + shift
     proven = _positive(top, h) & _orthogonal(v) & (p[0] > 0) & (p[1] > 0) & (p[2] > 0) & (p[3] > 0)
-    # Cholesky without a negative pivot proves top - H + D >= 0 with |D| <= 4 * 6 U * largest diagonal entry (TABLES.md 4).
+    # Cholesky without a negative pivot proves top - H + D >= 0 with |D| <= 4 * 6 U * largest diagonal entry
+    # (TABLES.md 4).
     upper = top + (100 * U) * (np.abs(top) + size + 1) + rounding
     return np.where(proven & np.isfinite(upper), upper, np.inf), attained
 
@@ -186,7 +198,8 @@ def flat_states(n: int) -> tuple[np.ndarray, np.ndarray]:
 
 def ascend(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bob: np.ndarray, steps: int,
            tolerance: float) -> tuple[np.ndarray, np.ndarray]:
-    """Mirror ascent ln rho <- ln rho + STEP/order * H with momentum on the trial states; nodes whose gap is below `tolerance` rest.
+    """Mirror ascent ln rho <- ln rho + STEP/order * H with momentum on the trial states; nodes whose gap is below
+    `tolerance` rest.
 
     Momentum starts anew at a node whose value falls (Nesterov's method in the logarithm of the state).
     """
@@ -198,7 +211,8 @@ def ascend(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bo
         h, _, _ = gradient(problem, some_p, some_v, alice[..., active], bob[..., active])
         reached = ((some_p[0] * h[0, 0] + some_p[1] * h[1, 1]) + some_p[2] * h[2, 2]) + some_p[3] * h[3, 3]
         largest = np.maximum(np.maximum(np.abs(h[0, 0]), np.abs(h[1, 1])), np.maximum(np.abs(h[2, 2]), np.abs(h[3, 3])))
-        k = STEP / (1 + problem.e) * np.minimum(1.0, 40 / np.maximum(largest, 1.0)) * h       # no wild step from a poor state
+        k = STEP / (1 + problem.e) * np.minimum(1.0,
+                40 / np.maximum(largest, 1.0)) * h       # no wild step from a poor state
         for i in range(4):
             k[i, i] = k[i, i] + log(some_p[i])
         plain = _conjugated(k, some_v.transpose(1, 0, 2))             # in the fixed basis
@@ -231,4 +245,5 @@ def ascend(problem: Problem, p: np.ndarray, v: np.ndarray, alice: np.ndarray, bo
 def _conjugated(k: np.ndarray, v: np.ndarray) -> np.ndarray:
     """V^T K V for each node."""
     half = np.stack([((k[:, 0, None] * v[0] + k[:, 1, None] * v[1]) + k[:, 2, None] * v[2]) + k[:, 3, None] * v[3]])[0]
-    return np.stack([((v[0, i] * half[0] + v[1, i] * half[1]) + v[2, i] * half[2]) + v[3, i] * half[3] for i in range(4)])
+    return np.stack([((v[0, i] * half[0] + v[1, i] * half[1]) + v[2, i] * half[2]) + v[3,
+            i] * half[3] for i in range(4)])

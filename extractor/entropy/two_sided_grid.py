@@ -1,11 +1,15 @@
 """Is a score table valid? A bound on its weighted sum over every quantum strategy, by an adaptive grid over two angles.
 
-Trusted. TABLES.md section 1 reduces every strategy to two qubits with one angle per side, section 2 bounds one pair of angles
-(`two_sided.upper_bounds`), section 3 the angles in between: over a cell of half widths r_A, r_B the best value exceeds the
-largest bound of its four corners by at most E_A(r_A) + E_B(r_B). Where the result is too large the cell is cut into four.
+Trusted. TABLES.md section 1 reduces every strategy to two qubits with one angle per side, section 2 bounds one pair
+of angles
+(`two_sided.upper_bounds`), section 3 the angles in between: over a cell of half widths r_A, r_B the best value
+exceeds the
+largest bound of its four corners by at most E_A(r_A) + E_B(r_B). Where the result is too large the cell is cut into
+four.
 The trial states come from an ascent that is trusted for nothing: a poor one makes the bound worse, never wrong.
 
-Everything is in units of e = order - 1 above 1: "excess" v stands for a weighted sum of 1 + e v. Every operation is one of
+Everything is in units of e = order - 1 above 1: "excess" v stands for a weighted sum of 1 + e v. Every operation is
+one of
 `portable`, so the answer is the same on every machine.
 """
 
@@ -28,10 +32,12 @@ NODE_LIMIT = 60_000
 
 @dataclass(frozen=True)
 class GridBound:
-    """What the grid found. bound: no strategy has an excess above it. attained: about the excess of the best strategy met.
+    """What the grid found. bound: no strategy has an excess above it. attained: about the excess of the best strategy
+    met.
 
     nodes    number of pairs of angles evaluated
-    places   (2, nodes) angles in units of pi / 2^DEPTH; values, p, v: attained excess and trial state of each (for the search)
+    places   (2, nodes) angles in units of pi / 2^DEPTH; values, p, v: attained excess and trial state of each (for
+             the search)
     """
 
     bound: float
@@ -44,9 +50,11 @@ class GridBound:
 
 
 def interpolation_error(problem: Problem, side: int, width: np.ndarray) -> np.ndarray:
-    """E/e for cells that are `width` (units of pi / 2^DEPTH) wide in the angle of side 0 (Alice) or 1 (Bob). TABLES.md 3."""
+    """E/e for cells that are `width` (units of pi / 2^DEPTH) wide in the angle of side 0 (Alice) or 1 (Bob).
+    TABLES.md 3."""
     e, order = problem.e, 1 + problem.e
-    excess = problem.excess if side == 0 else problem.excess.transpose(2, 3, 0, 1)     # [moving setting, outcome, other setting, outcome]
+    # indexed [moving setting, its outcome, other side's setting, its outcome]
+    excess = problem.excess if side == 0 else problem.excess.transpose(2, 3, 0, 1)
     weights = (problem.weights if side == 0 else problem.weights.T)[1]                # per setting of the other side
     r = width * (0.5 * np.pi / 2**DEPTH)
     square = r * r
@@ -116,10 +124,12 @@ class _Nodes:
         return np.array([self.at[int(key)] for key in (i << 20) + j], dtype=np.int64)
 
 
-def excess_bound(problem: Problem, *, target: float | None = None, tolerance: float = 0.0, limit: int = NODE_LIMIT) -> GridBound:
+def excess_bound(problem: Problem, *, target: float | None = None, tolerance: float = 0.0,
+        limit: int = NODE_LIMIT) -> GridBound:
     """Bound on the excess of a table.
 
-    With `target`, stops as soon as the bound is proven to be at most the target, or a strategy above it is met (then the
+    With `target`, stops as soon as the bound is proven to be at most the target, or a strategy above it is met (then
+    the
     bound is infinite). Otherwise stops when the bound is within `tolerance` of the best strategy met. At most about
     `limit` nodes; what is reached by then is returned, sound in any case.
     """
@@ -142,7 +152,8 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
                 return _result(nodes, np.inf)
             bounds = np.max(nodes.upper[corners], axis=0) + error
             open_cells = bounds > goal
-            # Where the corners' gap to what their states attain is what is missing, better states help; else smaller cells.
+            # Where the corners' gap to what their states attain is what is missing, better states help; else smaller
+            # cells.
             hopeful = open_cells & (np.max(nodes.attained[corners], axis=0) + error <= goal)
             touched = np.unique(corners[hopeful & (nodes.upper[corners] + error > goal)])
             touched = touched[~nodes.stuck[touched]]
@@ -169,4 +180,5 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
 
 
 def _result(nodes: _Nodes, bound: float) -> GridBound:
-    return GridBound(bound, max(best_local(nodes.problem), float(np.max(nodes.attained))), len(nodes.upper), nodes.places, nodes.attained, nodes.p, nodes.v)
+    return GridBound(bound, max(best_local(nodes.problem), float(np.max(nodes.attained))), len(nodes.upper),
+            nodes.places, nodes.attained, nodes.p, nodes.v)

@@ -1,11 +1,11 @@
-"""A second opinion on a score table, written apart from `extractor.entropy` and made to be read: standard library and numpy only.
+"""A second opinion on a score table, written apart from `extractor.entropy`: standard library and numpy only.
 
 Question: can any quantum strategy make the weighted sum  sum_z p(z) sum_c F(z, c) R(c | z)  exceed 1?
-1. Two qubits, real projective measurements and the angles phi_A, phi_B in [0, pi] between each side's two are enough, E holding the
-   purification; then R = <m|rho^(1/a)|m>^a with product vectors m and a = order.
-2. At fixed angles the sum f(rho) is concave and homogeneous, so f(rho) <= largest eigenvalue of f's gradient at ANY rho0 > 0.
+1. Two qubits, real projective measurements and angles phi_A, phi_B in [0, pi] between each side's two are enough,
+   E holding the purification; then R = <m|rho^(1/a)|m>^a with product vectors m and a = order.
+2. At fixed angles f(rho) is concave and homogeneous: f(rho) <= largest eigenvalue of f's gradient at ANY rho0 > 0.
 3. Between the corners of a rectangle of angles f exceeds its largest corner by at most E_A + E_B (`excess_between`).
-So: bound the corners, add E, cut where the result is above 1. All numbers are (value - 1)/(a - 1), so that valid means <= 0.
+So: bound the corners, add E, cut where the result is above 1. Numbers are (value - 1)/(a - 1): valid means <= 0.
 The derivations are in extractor/entropy/TABLES.md. Floating point: a corner errs by less than ROUNDING.
 """
 
@@ -25,12 +25,12 @@ STEPS = 12                # ascent steps a corner gets each time it is looked at
 
 def table_holds(declaration: Mapping[str, Any]) -> bool:
     """True if the table of a declaration document is shown to be valid under every settings distribution it allows."""
-    settings, table = declaration["settings"], declaration["table"]
-    return all(_holds(weights, excess, declaration["order"] - 1) for weights, excess in _cases(settings, table, declaration["order"] - 1))
+    e = declaration["order"] - 1
+    return all(_holds(*case, e) for case in _cases(declaration["settings"], declaration["table"], e))
 
 
 def _cases(settings: Mapping[str, Any], table: Mapping[str, Any], e: float) -> list[tuple[np.ndarray, np.ndarray]]:
-    """Per extreme settings distribution: weight of each setting pair [x, y], and (factor - 1)/e of each cell [x, y, a, b]."""
+    """Per extreme settings distribution: weight of each pair [x, y], and (factor - 1)/e of each cell [x, y, a, b]."""
     gamma, generation = settings["test_probability"], tuple(settings["generation"])
     factor = lambda credits: np.expm1(e * math.log(2) * np.array(credits)) / e   # noqa: E731
     cases = []
@@ -43,7 +43,7 @@ def _cases(settings: Mapping[str, Any], table: Mapping[str, Any], e: float) -> l
 
 
 def _distributions(p: np.ndarray, bias: float) -> list[np.ndarray]:
-    """All distributions with each conditional setting probability at an end of its interval, x drawn first or y first."""
+    """Distributions with each conditional probability at an end of its interval, x drawn first or y first."""
     if bias == 0:
         return [p]
     found = []
@@ -73,7 +73,8 @@ def _holds(weights: np.ndarray, excess: np.ndarray, e: float) -> bool:
                 return False                                      # a strategy that exceeds 1 was met
             for place, log_state, bound in zip(some, logs, upper):
                 log_states[place], bounds[place] = log_state, min(bound, bounds.get(place, math.inf))
-        between = excess_between(weights, excess, e, size) + excess_between(weights.T, excess.transpose(1, 0, 3, 2), e, size)
+        between = excess_between(weights, excess, e, size)
+        between += excess_between(weights.T, excess.transpose(1, 0, 3, 2), e, size)
         still_open = [(i, j) for i, j in cells
                       if max(bounds[i + di, j + dj] for di in (0, size) for dj in (0, size)) + between + ROUNDING > 0]
         if size == 1 or len(still_open) > 40_000:
@@ -88,7 +89,7 @@ def _holds(weights: np.ndarray, excess: np.ndarray, e: float) -> bool:
 
 
 def excess_between(weights: np.ndarray, excess: np.ndarray, e: float, size: int) -> float:
-    """E/e for Alice's angle over a cell of `size`: (a/2) T sum_y w max_b {|d_1 - d_0| r^2/2 + max(F) r^2 (ln(2/r) + 3/2)}, T = 4^(1-1/a)."""
+    """E_A/e: (a/2) T sum_y w max_b {|d_1 - d_0| r^2/2 + max(F) r^2 (ln(2/r) + 3/2)}, T = 4^(1-1/a), 2r the width."""
     r = size * math.pi / 2**DEPTH / 2
     total = 0.0
     for y in (0, 1):
@@ -98,23 +99,24 @@ def excess_between(weights: np.ndarray, excess: np.ndarray, e: float, size: int)
     return (1 + e) / 2 * 4 ** (e / (1 + e)) * total * (1 + 1e-9)
 
 
-def _climb(weights: np.ndarray, excess: np.ndarray, e: float, angles: np.ndarray, logs: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
-    """(ln rho0, least bound met, largest value met) after STEPS steps of ln rho <- ln rho + gradient; each visited rho0 gives a valid bound."""
+def _climb(weights: np.ndarray, excess: np.ndarray, e: float, angles: np.ndarray,
+           logs: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
+    """(ln rho0, least bound, largest value met) after STEPS steps ln rho <- ln rho + gradient; any rho0 gives a bound."""
     alice, bob = _outcomes(angles[0]), _outcomes(angles[1])
-    m = np.einsum("nxas,nybt->nxyabst", alice, bob).reshape(len(logs), 4, 4, 4)       # [node, pair, outcomes, component]
+    m = np.einsum("nxas,nybt->nxyabst", alice, bob).reshape(-1, 4, 4, 4)   # [node, pair, outcomes, i]
     d, w = excess.reshape(4, 4), weights.reshape(4, 1)
     kappa, least = e / (1 + e), np.full(len(logs), np.inf)
     for _ in range(STEPS):
         values, v = np.linalg.eigh(logs)
         p = np.maximum(np.exp(values - values[:, -1:]), 1e-9)
         p /= p.sum(axis=1, keepdims=True)
-        shrink = np.expm1(-kappa * np.log(p))                                         # p^(1/a)/p - 1
-        c = m @ v[:, None]                                                            # components in the eigenbasis of rho0
+        shrink = np.expm1(-kappa * np.log(p))                     # p^(1/a)/p - 1
+        c = m @ v[:, None]                                        # components in the eigenbasis of rho0
         t = np.einsum("nzki,ni->nzk", c * c, p * (1 + shrink))
-        a = _product(d, 1.0, np.expm1(e * np.log(t)) / e, e)                           # factor * a * t^(a-1), less 1, over e
+        a = _product(d, 1.0, np.expm1(e * np.log(t)) / e, e)    # (F a t^(a-1) - 1)/e
         x = np.einsum("nzk,nzki,nzkj->nij", w * a, c, c)
         g = _slopes(p, shrink, e)
-        h = x + g * (np.eye(4) + e * x)                                               # (gradient - 1)/e
+        h = x + g * (np.eye(4) + e * x)                           # (gradient - 1)/e
         least = np.minimum(least, np.linalg.eigvalsh(h)[:, -1])
         reached = float(np.einsum("ni,nii->n", p, h).max())
         logs = v @ (h + np.log(p)[:, :, None] * np.eye(4)) @ v.transpose(0, 2, 1)

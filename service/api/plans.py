@@ -35,7 +35,8 @@ def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
         raise InputError("give exactly one of score, calibration and rig", code="bad-usage", field="/score")
     s = body.settings
     settings = Settings(s.test_probability, tuple(s.distribution), tuple(s.generation), s.bias)
-    common = dict(**_expectation(body, settings), settings=settings, convention=_convention(body), soundness=body.soundness, output_rule=body.output_rule,
+    common = dict(**_expectation(body, settings), settings=settings, convention=_convention(body),
+            soundness=body.soundness, output_rule=body.output_rule,
                   disclosure=body.disclosure, order=body.order, confidence=body.confidence)
     if not _ROOM.acquire(timeout=WAIT_S):
         raise Unavailable("others are planning; try again", code="planning-busy", retry_after_s=WAIT_S)

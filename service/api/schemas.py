@@ -291,7 +291,8 @@ class RigModel(_In):
 
 
 class PlanRequest(_In):
-    """Rounds or a wanted length (one of them), and an expected score, a calibration tally or a modelled rig (one of them)."""
+    """Rounds or a wanted length (one of them), and an expected score, a calibration tally or a modelled rig (one of
+    them)."""
 
     rounds: int | None = Field(None, ge=1, le=2**50)
     length: int | None = Field(None, ge=1, le=2**50, description="bits; the plan then says how many rounds they take")

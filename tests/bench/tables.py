@@ -2,9 +2,12 @@
 
     python -m tests.bench.tables [--json] [--rigs name ...] [--no-published] [--no-rounds]
 
-Per rig and order: the certified rate in bits per round beside the rate that the issue of this bench asks for, seconds of the search and of
-the certification (bound and recheck), nodes, and the second check's seconds. Then rounds for 512 bits at soundness 2^-64 on the dimmest
-rig, and, as a yardstick of the method only, what the counts of two published experiments would be credited under a table found on them.
+Per rig and order: the certified rate in bits per round beside the rate that the issue of this bench asks for, seconds
+of the search and of
+the certification (bound and recheck), nodes, and the second check's seconds. Then rounds for 512 bits at soundness
+2^-64 on the dimmest
+rig, and, as a yardstick of the method only, what the counts of two published experiments would be credited under a
+table found on them.
 Seconds are wall time; a busy machine lengthens them.
 """
 
@@ -43,15 +46,19 @@ def row(name: str, figures: dict[str, float]) -> None:
         made = table_making.make_table(behaviour, Settings(), 10**9, 1e-9, 1 + e)
         took = time.perf_counter() - start
         start = time.perf_counter()
-        results = [two_sided_grid.excess_bound(problem, target=0.0) for problem in table_validity.problems(made.table, Settings())]
+        results = [two_sided_grid.excess_bound(problem, target=0.0) for problem in table_validity.problems(made.table,
+                Settings())]
         certification = time.perf_counter() - start
-        declaration = Declaration("bench", 10**9, "factor-table", 1e-9, "credit", 2 * 10**9, order=made.table.order, table=made.table)
+        declaration = Declaration("bench", 10**9, "factor-table", 1e-9, "credit", 2 * 10**9, order=made.table.order,
+                table=made.table)
         start = time.perf_counter()
         holds = table_check.table_holds(documents.declaration_document(declaration))
         label = f"{name}_order_1+{e:g}"
         figures |= {
-            f"{label}_bits_per_round": made.rate, f"{label}_of_wanted": made.rate / rate, f"{label}_validity_bound": made.validity_bound,
-            f"{label}_lost_to_certification": made.lost / made.rate, f"{label}_nodes": float(sum(r.nodes for r in results)),
+            f"{label}_bits_per_round": made.rate, f"{label}_of_wanted": made.rate / rate,
+                    f"{label}_validity_bound": made.validity_bound,
+            f"{label}_lost_to_certification": made.lost / made.rate,
+                    f"{label}_nodes": float(sum(r.nodes for r in results)),
             f"{label}_search_and_certification_s": took, f"{label}_certification_s": certification,
             f"{label}_second_check_holds": float(holds), f"{label}_second_check_s": time.perf_counter() - start}
 
@@ -60,10 +67,12 @@ def published(figures: dict[str, float]) -> None:
     for name, counts, wanted in (("photons_2015_vienna", VIENNA_2015, 1.25e5), ("photons_2015_nist", NIST_2015, 4.1e3)):
         tally = tally_of(counts)
         start = time.perf_counter()
-        plan = pipeline.plan(**pipeline.expect(calibration=tally), rounds=tally.rounds, soundness=1e-6, method="factor-table")
+        plan = pipeline.plan(**pipeline.expect(calibration=tally), rounds=tally.rounds, soundness=1e-6,
+                method="factor-table")
         earned = float(np.dot(plan.table["test"], tally.counts[16:])) - plan.penalty_bits
         figures |= {f"{name}_bits": float(plan.certified_length), f"{name}_of_wanted": plan.certified_length / wanted,
-                    f"{name}_bits_on_raw_counts": earned, f"{name}_order_minus_1": plan.order - 1, f"{name}_s": time.perf_counter() - start}
+                    f"{name}_bits_on_raw_counts": earned, f"{name}_order_minus_1": plan.order - 1,
+                            f"{name}_s": time.perf_counter() - start}
 
 
 def main() -> None:
@@ -84,7 +93,8 @@ def main() -> None:
                     "rounds_for_512_bits_s": time.perf_counter() - start}
     if not args.no_published:
         published(figures)
-    figures["least_of_wanted"] = min((v for k, v in figures.items() if k.endswith("_of_wanted") and "rounds" not in k), default=math.nan)
+    figures["least_of_wanted"] = min((v for k,
+            v in figures.items() if k.endswith("_of_wanted") and "rounds" not in k), default=math.nan)
     show(figures, args.json)
 
 

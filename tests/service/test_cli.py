@@ -244,14 +244,17 @@ def test_plan_compares_methods(capsys) -> None:
 
 
 def test_plan_of_a_modelled_rig_names_rate_order_and_table(capsys) -> None:
-    """plan --method factor-table --json answers with rate, order, certified length, validity bound and table at the top."""
-    code, out, _ = run(capsys, "plan", "--rig-visibility", "0.93", "--rounds", "1e6", "--soundness", "1e-6", "--order", "1.01",
+    """plan --method factor-table --json answers with rate, order, certified length, validity bound and table at the
+    top."""
+    code, out, _ = run(capsys, "plan", "--rig-visibility", "0.93", "--rounds", "1e6", "--soundness", "1e-6",
+            "--order", "1.01",
                        "--method", "factor-table", "--round-rate", "1000", "--json")
     plan = json.loads(out)
     assert code == 0 and plan["order"] == 1.01 and plan["validity_bound"] <= 1 and len(plan["table"]["test"]) == 16
     assert 1.04 < plan["rate"] < 1.06 and plan["certified_length"] > 10**6
     assert plan["hours"] == pytest.approx(1e6 / 3.6e6) and plan["net_bits"] < 0
-    code, _, err = run(capsys, "plan", "--rig-visibility", "0.93", "--score", "0.8", "--rounds", "1e6", "--soundness", "1e-6")
+    code, _, err = run(capsys, "plan", "--rig-visibility", "0.93", "--score", "0.8", "--rounds", "1e6", "--soundness",
+            "1e-6")
     assert code == 2 and "exactly one" in err
 
 

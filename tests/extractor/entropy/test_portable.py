@@ -11,7 +11,8 @@ from extractor.entropy.numerics import exactly
 
 
 def test_log_and_expm1_keep_their_errors():
-    """Against 60-digit arithmetic: 8 U (1 + |ln x|) for log; 8 U relative near 0 and 8 U (1 + |x|) e^x beyond for expm1."""
+    """Against 60-digit arithmetic: 8 U (1 + |ln x|) for log; 8 U relative near 0 and 8 U (1 + |x|) e^x beyond for
+    expm1."""
     rng = np.random.default_rng(1)
     x = np.concatenate([np.exp(rng.uniform(-40, 1, 1500)), 1 + rng.normal(size=500) * 1e-7])
     with exactly():

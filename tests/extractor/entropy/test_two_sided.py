@@ -40,7 +40,8 @@ def sharp_powers(rho: np.ndarray, vectors: np.ndarray, order: float) -> np.ndarr
 
 
 def attacked(problem: Problem, rng, starts: int) -> float:
-    """Best value of an independent attack: local optimisation over complex mixed states and measurements anywhere on the sphere."""
+    """Best value of an independent attack: local optimisation over complex mixed states and measurements anywhere on
+    the sphere."""
     def powers(v):
         g = (v[:16] + 1j * v[16:32]).reshape(4, 4)
         rho = g @ g.conj().T
@@ -52,23 +53,27 @@ def attacked(problem: Problem, rng, starts: int) -> float:
     for _ in range(starts):
         start = rng.normal(size=40) * np.concatenate([np.full(32, 10 ** rng.uniform(-2, 0)), np.full(8, 3.0)])
         start[0] += 1
-        best = max(best, -optimize.minimize(lambda v: -value(problem, powers(v)), start, method="L-BFGS-B", options={"maxiter": 80}).fun)
+        best = max(best, -optimize.minimize(lambda v: -value(problem, powers(v)), start, method="L-BFGS-B",
+                options={"maxiter": 80}).fun)
     return best
 
 
 def test_the_shortcut_of_the_attack():
-    """For rank-one measurements and complex states the attack's short formula equals the definition of the Rényi power."""
+    """For rank-one measurements and complex states the attack's short formula equals the definition of the Rényi
+    power."""
     rng = np.random.default_rng(12)
     for order in (1.001, 1.5, 2.0):
         rho = attacks.random_state(rng, 3)
-        vectors = np.linalg.qr(rng.normal(size=(2, 2, 2, 2)) + 1j * rng.normal(size=(2, 2, 2, 2)))[0].transpose(0, 1, 3, 2)
+        vectors = np.linalg.qr(rng.normal(size=(2, 2, 2, 2)) + 1j * rng.normal(size=(2, 2, 2, 2)))[0].transpose(0, 1,
+                3, 2)
         sides = [[[np.outer(m, m.conj()) for m in setting] for setting in side] for side in vectors]
         assert np.allclose(sharp_powers(rho, vectors, order), attacks.powers(rho, *sides, order)[0], atol=1e-12)
 
 
 @pytest.mark.parametrize("e", [1e-3, 0.1, 1.0])
 def test_the_bound_covers_every_attack_and_is_tight(e):
-    """Random strategies of all kinds and an independent optimiser stay below the bound; the optimiser comes within the tolerance."""
+    """Random strategies of all kinds and an independent optimiser stay below the bound; the optimiser comes within
+    the tolerance."""
     rng = np.random.default_rng(int(1000 * e))
     for k in range(2):
         problem = random_problem(rng, e)
@@ -131,7 +136,8 @@ def test_an_invalid_table_is_refused():
 
 
 def test_tables_close_to_neutral():
-    """Credits 0 everywhere give a sum of exactly 1 under many strategies: a little less is valid, a little more is not."""
+    """Credits 0 everywhere give a sum of exactly 1 under many strategies: a little less is valid, a little more is
+    not."""
     table_validity.check_valid(ScoreTable(1.1, (-0.05,) * 16, (-0.05,) * 4), Settings())
     with pytest.raises(InputError):
         table_validity.check_valid(ScoreTable(1.1, (1e-6,) * 16, (1e-6,) * 4), Settings())
@@ -144,7 +150,8 @@ def test_settings_enter_as_declared(settings):
     e, gamma = made.table.order - 1, settings.test_probability
     for rho, a, b in attacks.strategies(60, seed=9):
         r = attacks.powers(rho, a, b, made.table.order)[0]
-        tests = sum(p * float(np.sum(2 ** (e * np.array(made.table.test[4 * z:4 * z + 4])) * r[z >> 1, z & 1].reshape(-1)))
+        tests = sum(p * float(np.sum(2 ** (e * np.array(made.table.test[4 * z:4 * z + 4])) * r[z >> 1,
+                z & 1].reshape(-1)))
                     for z, p in enumerate(settings.distribution))
         spared = float(np.sum(2 ** (e * np.array(made.table.generation)) * r[settings.generation].reshape(-1)))
         assert gamma * tests + (1 - gamma) * spared <= 1
@@ -174,10 +181,13 @@ def von_neumann_of_strategy(behaviour_p: np.ndarray, rho, alice, bob, settings_w
 
 
 def test_the_limit_is_the_two_sided_von_neumann_entropy():
-    """As order -> 1 the gain approaches, and does not exceed, the smallest entropy over strategies with the rig's statistics.
+    """As order -> 1 the gain approaches, and does not exceed, the smallest entropy over strategies with the rig's
+    statistics.
 
-    Brute force for the singlet with noise: a Lagrange multiplier on the score, all Bell-diagonal and other two-qubit states at all
-    angles by local optimisation; the value at Tsirelson's point is 1.600876 (CHECKS: two-sided, Bhavsar, Ragy, Colbeck 2023).
+    Brute force for the singlet with noise: a Lagrange multiplier on the score, all Bell-diagonal and other two-qubit
+    states at all
+    angles by local optimisation; the value at Tsirelson's point is 1.600876 (CHECKS: two-sided, Bhavsar, Ragy,
+    Colbeck 2023).
     """
     convention = planning.Convention()
     for score, known in ((0.8535533, 1.600876), (0.80, None)):
@@ -198,7 +208,8 @@ def test_the_limit_is_the_two_sided_von_neumann_entropy():
             sides = [[[(np.eye(2) + s * attacks.observable(np.array([np.sin(t), 0, np.cos(t)]))) / 2 for s in (1, -1)]
                       for t in (0, turn)] for turn in v[10:]]
             _, p = attacks.powers(rho, *sides, 1.5)
-            w = sum(p[x, y, a, b] for x in (0, 1) for y in (0, 1) for a in (0, 1) for b in (0, 1) if convention.wins(x, y, a, b)) / 4
+            w = sum(p[x, y, a, b] for x in (0, 1) for y in (0, 1) for a in (0, 1) for b in (0,
+                    1) if convention.wins(x, y, a, b)) / 4
             return von_neumann_of_strategy(p, rho, *sides, (0.25,) * 4) - slope * (w - score)
 
         rng = np.random.default_rng(6)
@@ -209,7 +220,8 @@ def test_the_limit_is_the_two_sided_von_neumann_entropy():
 
 
 def test_collision_case():
-    """At order 2 the power of a rank-one outcome is <m|rho^(1/2)|m>^2: the gradient and the certified table agree with that."""
+    """At order 2 the power of a rank-one outcome is <m|rho^(1/2)|m>^2: the gradient and the certified table agree
+    with that."""
     rng = np.random.default_rng(8)
     rho = attacks.random_state(rng, 4)
     sides = attacks.effects(rng, False), attacks.effects(rng, False)
@@ -218,7 +230,8 @@ def test_collision_case():
     r, _ = attacks.powers(rho, *sides, 2.0)
     for x in range(2):
         for a in range(2):
-            assert r[x, x, a, a] == pytest.approx(np.trace(root @ np.kron(sides[0][x][a], sides[1][x][a])).real ** 2, abs=1e-12)
+            assert r[x, x, a, a] == pytest.approx(np.trace(root @ np.kron(sides[0][x][a], sides[1][x][a])).real ** 2,
+                    abs=1e-12)
     made = table_making.make_table(planning._of_score(0.85, planning.Convention()), Settings(), 1000, 0.1, 2.0)
     assert 0 < made.rate < 1.3
     for rho, a, b in attacks.strategies(60, seed=3):
@@ -229,7 +242,8 @@ def test_collision_case():
 def test_the_search_alone_is_not_trusted():
     """A search with too few strategies gives an invalid table; the certifier sees it."""
     behaviour = planning._of_score(0.83, planning.Convention())
-    search = table_search.Search.of(table_making.frequencies(behaviour, Settings()), table_making._layout(Settings()), -1e6)
+    search = table_search.Search.of(table_making.frequencies(behaviour, Settings()), table_making._layout(Settings()),
+            -1e6)
     factors, gain = search.fit(1e-2)
     (problem,) = search.layout.problems(factors, 1e-2)
     assert two_sided_grid.excess_bound(problem, target=0.0).bound == np.inf and gain > 0

@@ -68,7 +68,8 @@ def test_planning(north: Caller) -> None:
 
 
 def test_planning_a_modelled_rig(north: Caller) -> None:
-    """A rig model is an expectation like a score; the plan of factor-table carries its order, rate, validity bound and table."""
+    """A rig model is an expectation like a score; the plan of factor-table carries its order, rate, validity bound
+    and table."""
     answer = north.post("/v1/plan", {"rounds": 10**6, "rig": {"visibility": 0.93}, "soundness": 1e-6, "order": 1.01,
                                      "method": "factor-table"}).json()
     (plan,) = answer["plans"]
