@@ -38,8 +38,10 @@ def cells() -> Iterator[tuple[int, tuple[int, int, int, int, int]]]:
 
 
 def _number(value: object, field: str, low: float, high: float, *, low_open: bool = False, high_open: bool = False) -> None:
-    if isinstance(value, bool) or not isinstance(value, (int, float)) or not math.isfinite(value):
-        raise InputError(f"{value!r} is not a finite number", code="bad-number", field=field)
+    if isinstance(value, bool) or not isinstance(value, (int, float)):
+        raise InputError(f"{value!r} is not a number", code="bad-number", field=field)
+    if isinstance(value, int) and abs(value) > 2**53 or not math.isfinite(value):     # a long integer would not even become a float
+        raise InputError("is not a finite number of ordinary size", code="bad-number", field=field)
     if value < low or value > high or (low_open and value == low) or (high_open and value == high):
         left, right = "(" if low_open else "[", ")" if high_open else "]"
         raise InputError(f"{value!r} is outside {left}{low:g}, {high:.7g}{right}", code="out-of-range", field=field)
