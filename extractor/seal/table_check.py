@@ -101,7 +101,7 @@ def excess_between(weights: np.ndarray, excess: np.ndarray, e: float, size: int)
 
 def _climb(weights: np.ndarray, excess: np.ndarray, e: float, angles: np.ndarray,
            logs: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
-    """(ln rho0, least bound, largest value met) after STEPS steps ln rho <- ln rho + gradient; any rho0 gives a bound."""
+    """(ln rho0, least bound, largest value met) after STEPS of ln rho <- ln rho + gradient; any rho0 gives a bound."""
     alice, bob = _outcomes(angles[0]), _outcomes(angles[1])
     m = np.einsum("nxas,nybt->nxyabst", alice, bob).reshape(-1, 4, 4, 4)   # [node, pair, outcomes, i]
     d, w = excess.reshape(4, 4), weights.reshape(4, 1)
