@@ -24,7 +24,8 @@ PLANES = ("t", "x", "y", "a", "b")
 MAXIMUM_ROUNDS = 2**50          # counts stay exact in JSON numbers and in float64
 LEAST_ORDER = 1 + 1e-10         # what the largest run could use is above it
 MOST_CREDIT = 1e9               # bits per round
-METHODS = ("factor-closed", "eat-2018", "eat-2019")
+FACTOR_METHODS = ("factor-table", "factor-closed")
+METHODS = FACTOR_METHODS + ("eat-2018", "eat-2019")
 
 
 def cell_index(t: int, x: int, y: int, a: int, b: int) -> int:
@@ -267,8 +268,8 @@ class Declaration:
     settings: Settings = Settings()
     convention: Convention = Convention()
     no_click: tuple[int | None, int | None] = (None, None)
-    order: float | None = None           # alpha of factor-closed and eat-2019
-    table: ScoreTable | None = None      # factor-closed
+    order: float | None = None           # alpha of the factor methods and eat-2019
+    table: ScoreTable | None = None      # factor-table, factor-closed
     acceptance: Acceptance | None = None  # eat-2018, eat-2019
     disclosure: str = "confidential"     # "public": what report and tally reveal is paid for in the penalty
     seed_source: str = "system"          # or "upload"
@@ -293,11 +294,11 @@ class Declaration:
                 raise InputError(f"{value!r} is neither 0, 1 nor null", code="bad-declaration", field="/no_click")
         if self.expected_score is not None:
             _number(self.expected_score, "/expected_score", 0.0, 1.0)
-        factor = self.method == "factor-closed"
+        factor = self.method in FACTOR_METHODS
         if factor != (self.table is not None):
-            raise InputError("factor-closed needs a score table, the eat methods take none", code="bad-declaration", field="/table")
+            raise InputError("the factor methods need a score table, the eat methods take none", code="bad-declaration", field="/table")
         if factor == (self.acceptance is not None):
-            raise InputError("the eat methods need an acceptance rule, factor-closed takes none",
+            raise InputError("the eat methods need an acceptance rule, the factor methods take none",
                              code="bad-declaration", field="/acceptance")
         if self.method == "eat-2018":
             if self.order is not None:

@@ -10,13 +10,14 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
-from typing import BinaryIO
+from typing import Any, BinaryIO
 
 from extractor import tally as tallying
 from extractor.bell.diagnostics import Diagnostic, diagnose
+from extractor.bell.rigs import Rig as SimulatedRig
 from extractor.bell.score import Score, score
 from extractor.documents import tally_counts
-from extractor.entropy import bound, planning
+from extractor.entropy import behaviours, bound, planning
 from extractor.errors import Defect, InputError
 from extractor.hashing.toeplitz import SeedReader, ToeplitzStream, find_backend
 from extractor.model import Certificate, Convention, Declaration, RoundBatch, RoundRules, Tally
@@ -31,18 +32,36 @@ compare = planning.compare
 rounds_for = planning.rounds_for
 
 
-def declare(*, calibration: Tally | None = None, score: float | None = None, **arguments) -> Declaration:
-    """A declaration for a rig known by a calibration tally or an expected winning probability (exactly one of the two).
+def expect(*, score: float | None = None, calibration: Tally | None = None, model: SimulatedRig | None = None,
+           convention: Convention = Convention()) -> dict[str, Any]:
+    """What a rig may be expected to do, as arguments of `plan`, `compare`, `rounds_for` (score, and for factor-table
+    behaviour).
+
+    Exactly one of an expected winning probability, a calibration tally (its likeliest quantum behaviour is taken) and
+    a modelled rig.
+    """
+    if sum(value is not None for value in (calibration, model, score)) != 1:
+        raise InputError("give exactly one of a score, a calibration tally and a modelled rig", code="bad-usage", field="/score")
+    if score is not None:
+        return {"score": score}
+    if calibration is not None:
+        return {"score": planning.score_of(calibration, convention),
+                "behaviour": tuple(behaviours.of_tally(calibration).reshape(-1).tolist())}
+    tests = model.cell_probabilities()[1]
+    behaviour = tests / tests.sum(axis=(2, 3), keepdims=True)
+    return {"score": model.winning_probability, "behaviour": tuple(behaviour.reshape(-1).tolist())}
+
+
+def declare(*, calibration: Tally | None = None, score: float | None = None, model: SimulatedRig | None = None,
+            **arguments) -> Declaration:
+    """A declaration for a rig known by a calibration tally, an expected winning probability or a model (exactly one of them).
 
     The calibration's digest goes into the declaration. Arguments and errors otherwise as `entropy.planning.declare`.
     """
-    if (calibration is None) == (score is None):
-        raise InputError("give either a calibration tally or a score", code="bad-usage", field="/score")
-    if calibration is None:
-        return planning.declare(score=score, **arguments)
-    return planning.declare(
-        score=planning.score_of(calibration, arguments.get("convention", Convention())), calibration_digest=canonical.digest(tally_counts(calibration)),
-        calibration_rounds=calibration.rounds, **arguments)
+    expected = expect(score=score, calibration=calibration, model=model, convention=arguments.get("convention", Convention()))
+    if calibration is not None:
+        arguments |= {"calibration_digest": canonical.digest(tally_counts(calibration)), "calibration_rounds": calibration.rounds}
+    return planning.declare(**expected, **arguments)
 
 
 def batches_of(files: Iterable[tuple[BinaryIO, str]], rules: RoundRules) -> Iterator[RoundBatch]:
@@ -82,7 +101,8 @@ def read_run(batches: Iterable[RoundBatch], on_rounds: Callable[[int], None] | N
     return total, digest.hexdigest()
 
 
-def look(declaration: Declaration, tally: Tally, calibration: Tally | None = None) -> tuple[Score, tuple[Diagnostic, ...]]:
+def look(declaration: Declaration, tally: Tally, calibration: Tally | None = None) -> tuple[Score,
+        tuple[Diagnostic, ...]]:
     """Score and diagnostics of a tally under its declaration: for people to read; neither certifies anything."""
     return (score(tally, declaration.convention, declaration.settings, declaration.no_click),
             diagnose(tally, declaration.convention, declaration.settings, calibration))
@@ -90,28 +110,34 @@ def look(declaration: Declaration, tally: Tally, calibration: Tally | None = Non
 
 @dataclass(frozen=True)
 class PartialHash:
-    """The hash of the first `rounds` rounds of a run: `bits` is the XOR so far, packed, ceil(m/8) bytes. Secret like the bits."""
+    """The hash of the first `rounds` rounds of a run: `bits` is the XOR so far, packed, ceil(m/8) bytes. Secret like
+    the bits."""
 
     rounds: int
     bits: bytes
 
 
 def extract(declaration: Declaration, certificate: Certificate, batches_from: Callable[[int], Iterable[RoundBatch]],
-            seed: SeedReader, *, resume: PartialHash | None = None, on_partial: Callable[[PartialHash], None] | None = None,
+            seed: SeedReader, *, resume: PartialHash | None = None,
+                    on_partial: Callable[[PartialHash], None] | None = None,
             partial_every_rounds: int = 2**25, on_progress: Callable[[int, int], None] | None = None,
             backend: str | None = None, threads: int = 1) -> bytes:
-    """The certified bits: Toeplitz hash of the run's raw string a_1 … a_N b_1 … b_N, N the declared rounds, zero padded.
+    """The certified bits: Toeplitz hash of the run's raw string a_1 … a_N b_1 … b_N, N the declared rounds, zero
+    padded.
 
     batches_from(k) yields the run's rounds from round k on (k a multiple of BLOCK_ROUNDS), in batches of BLOCK_ROUNDS.
-    The a plane and the b plane are hashed side by side, each with its own window of the seed. on_partial is called about
-    every `partial_every_rounds` rounds with what is done so far; handing the last one back as `resume` gives the same bits.
+    The a plane and the b plane are hashed side by side, each with its own window of the seed. on_partial is called
+    about
+    every `partial_every_rounds` rounds with what is done so far; handing the last one back as `resume` gives the same
+    bits.
     Returns ceil(m/8) bytes, LSB first, tail bits zero. Raises InputError for a seed of the wrong length.
     """
     if certificate.outcome != "certified":
         raise Defect("a refused run has no bits")
     m, n = certificate.certified_length, declaration.raw_bits
     if seed.bits != certificate.seed_bits:
-        raise InputError(f"the seed has {seed.bits} bits, exactly {certificate.seed_bits} are needed", code="seed-length")
+        raise InputError(f"the seed has {seed.bits} bits, exactly {certificate.seed_bits} are needed",
+                code="seed-length")
     done = resume.rounds if resume else 0
     if done % BLOCK_ROUNDS and done != certificate.rounds:
         raise Defect(f"a partial hash ends at round {done}, not at a block's end")

@@ -10,14 +10,16 @@ from dataclasses import dataclass
 from decimal import Decimal
 
 from extractor.errors import InputError
-from extractor.entropy import accumulation, lengths, statements, validity
+from extractor.entropy import accumulation, lengths, statements, table_validity, validity
 from extractor.entropy.numerics import ZERO, down, exactly, floor_bits, number, up
-from extractor.model import MAXIMUM_ROUNDS, SETTING_PAIRS, CellCredit, Certificate, Declaration, Tally, Term, cells
+from extractor.model import FACTOR_METHODS, MAXIMUM_ROUNDS, SETTING_PAIRS, CellCredit, Certificate, Declaration, Tally, Term, cells
 
 MOST_LOG2_FACTOR = 900     # factors of a table stay below 2^900: their sums still fit a float
 
 _FACTOR = ("estimation factors: Knill, Zhang, Fu 2018 (arXiv:1806.04553); Zhang, Fu, Knill, Phys. Rev. Research 2, 013016 (2020); "
            "one-round bound: Hahn, Philip, Tan, Brown 2025 (arXiv:2507.07365)")
+_TABLE = ("estimation factors: Knill, Zhang, Fu 2018 (arXiv:1806.04553); Zhang, Fu, Knill, Phys. Rev. Research 2, 013016 (2020); "
+          "validity over all two-qubit strategies: derived in extractor/entropy/TABLES.md")
 _RENYI_HASH = "Dupuis, IEEE Trans. Inf. Theory 69, 7784 (2023) (arXiv:2105.05342)"
 _SMOOTH_HASH = "Tomamichel, Schaffner, Smith, Renner, IEEE Trans. Inf. Theory 57, 5524 (2011) (arXiv:1002.2436)"
 _EAT_2018 = "Dupuis, Fawzi, Renner (arXiv:1607.01796); Arnon-Friedman et al., Nat. Commun. 9, 459 (2018)"
@@ -43,6 +45,9 @@ def check_declaration(declaration: Declaration) -> None:
         raise InputError(f"with a test probability of {declaration.settings.test_probability!r} not even one of {declaration.rounds} rounds "
                          "is expected to be a test", code="no-tests", field="/settings/test_probability")
     with exactly():
+        if declaration.method == "factor-table":
+            table_validity.check_valid(declaration.table, declaration.settings)
+            return
         if declaration.method == "factor-closed":
             validity.allowed_distributions(declaration.settings)
             validity.win_lose_factors(declaration.table, declaration.convention)
@@ -51,11 +56,11 @@ def check_declaration(declaration: Declaration) -> None:
                                  field="/table")
             return
         if not declaration.settings.uniform:
-            raise InputError(f"{declaration.method} covers uniform test settings without bias only; use factor-closed",
+            raise InputError(f"{declaration.method} covers uniform test settings without bias only; use factor-table or factor-closed",
                              code="settings-not-covered", field="/settings")
         if declaration.output_rule != "fixed":
             raise InputError(f"{declaration.method} rests on one threshold fixed beforehand, so its length must be fixed too; "
-                             "use factor-closed for a length from credit", code="rule-not-covered", field="/output/rule")
+                             "use factor-table or factor-closed for a length from credit", code="rule-not-covered", field="/output/rule")
         counted = "wins" if declaration.method == "eat-2018" else "losses"
         if declaration.acceptance.count != counted:
             raise InputError(f"{declaration.method} accepts on the number of {counted}", code="bad-acceptance", field="/acceptance/count")
@@ -72,7 +77,7 @@ def certify(declaration: Declaration, tally: Tally) -> Certificate:
     check_declaration(declaration)
     _check_tally(declaration, tally)
     with exactly():
-        account = _factor_closed(declaration, tally) if declaration.method == "factor-closed" else _accumulation(declaration, tally)
+        account = _factor(declaration, tally) if declaration.method in FACTOR_METHODS else _accumulation(declaration, tally)
         classes, why = lengths.class_bits(declaration, tally.rounds)
         terms = account.terms + (("classes", -classes, f"cost of what becomes known besides the bits: {why}", "Hölder inequality over the classes, see lengths.class_bits"),)
         # Nobody gets more than the raw bits that exist, whatever was declared; far below zero the exact number says no more.
@@ -119,28 +124,34 @@ def _check_tally(declaration: Declaration, tally: Tally) -> None:
                 code="impossible-cell", field="/counts")
 
 
-def _factor_closed(declaration: Declaration, tally: Tally) -> _Account:
-    """Credit of every occupied cell, the table's slack, and the cost of soundness. MATH section 3."""
+def _factor(declaration: Declaration, tally: Tally) -> _Account:
+    """Credit of every occupied cell, the table's slack, and the cost of soundness. MATH section 3.
+
+    factor-table: `check_declaration` has shown the table to be valid as it stands, so there is no slack to take off, and no digit
+    of the bound appears. factor-closed: the slack is what its bound exceeds 1 by.
+    """
     table, order = declaration.table, number(declaration.order)
-    bound = validity.weighted_sum_bound(table, declaration.settings, declaration.convention)
-    slack = validity.slack_bits(table, bound)
     credit, earned = ZERO, []
     for i, (t, x, y, a, b) in cells():
         if tally.counts[i]:
             bits = table.test[i - 16] if t else table.generation[2 * a + b]
             credit += number(bits) * tally.counts[i]
             earned.append(CellCredit(t, x, y, a, b, tally.counts[i], bits))
+    terms = [("credit", credit, "sum over cells of rounds times declared credit",
+              _TABLE if declaration.method == "factor-table" else _FACTOR)]
+    numbers: dict[str, float | int | str] = {"order": declaration.order}
+    if declaration.method == "factor-table":
+        numbers["validity"] = "no quantum strategy exceeds 1 under this table: confirmed before the tally was looked at"
+    else:
+        bound = validity.weighted_sum_bound(table, declaration.settings, declaration.convention)
+        slack = validity.slack_bits(table, bound)
+        terms.append(("slack", -slack * tally.rounds,
+                      "rounds times log2(validity bound)/(order - 1): what the table exceeds validity by", _FACTOR))
+        numbers |= {"validity_bound": up(bound), "slack_bits_per_round": up(slack)}
     cost = lengths.renyi_hash_cost(number(declaration.soundness), order)
-    return _Account(
-        terms=(
-            ("credit", credit, "sum over cells of rounds times declared credit", _FACTOR),
-            ("slack", -slack * tally.rounds, "rounds times log2(validity bound)/(order - 1): what the table exceeds validity by", _FACTOR),
-            ("soundness", -cost, "order/(order - 1) times log2(1/soundness)", _RENYI_HASH),
-            ("hash constant", Decimal(2), "constant of the leftover hash bound", _RENYI_HASH),
-        ),
-        cells=tuple(earned),
-        numbers={"order": declaration.order, "validity_bound": up(bound), "slack_bits_per_round": up(slack)},
-    )
+    terms += [("soundness", -cost, "order/(order - 1) times log2(1/soundness)", _RENYI_HASH),
+              ("hash constant", Decimal(2), "constant of the leftover hash bound", _RENYI_HASH)]
+    return _Account(tuple(terms), tuple(earned), numbers)
 
 
 def _accumulation(declaration: Declaration, tally: Tally) -> _Account:
@@ -166,7 +177,7 @@ def _accumulation(declaration: Declaration, tally: Tally) -> _Account:
         met, short = losses <= rule.limit, f"{losses} test rounds were lost, at most {rule.limit} were declared"
     refusal = None
     if tally.rounds < n:
-        refusal = f"{declaration.method} speaks about all {n} declared rounds, the run has {tally.rounds}; factor-closed can stop early"
+        refusal = f"{declaration.method} speaks about all {n} declared rounds, the run has {tally.rounds}; the factor methods can stop early"
     elif not met:
         refusal = f"the declared threshold was missed: {short}"
     numbers: dict[str, float | int | str] = {

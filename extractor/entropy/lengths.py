@@ -5,7 +5,7 @@ from __future__ import annotations
 from decimal import Decimal
 
 from extractor.entropy.numerics import ONE, exactly, log2, number
-from extractor.model import Declaration
+from extractor.model import FACTOR_METHODS, Declaration
 
 DIGEST_BITS = 256
 
@@ -50,7 +50,7 @@ def class_bits(declaration: Declaration, rounds: int) -> tuple[Decimal, str]:
         return log2(ways) + 2 * log2(Decimal(n + 1)) + 2 * DIGEST_BITS, (
             f"tally over {cells} cells, two no-click counts and two digests of {DIGEST_BITS} bits may be published")
     cost, why = log2(ONE), []
-    if declaration.method == "factor-closed":
+    if declaration.method in FACTOR_METHODS:
         cost += ONE if rounds == n else ONE + log2(Decimal(n))
         why.append("the run may stop early" if rounds == n else f"the run stopped early, after any of up to {n} rounds")
     if declaration.output_rule == "credit":

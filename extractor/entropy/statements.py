@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from extractor.model import Declaration
+from extractor.model import FACTOR_METHODS, Declaration
 
 CAUTIONS = (
     "The certificate holds only under the assumptions listed in it; nothing measured in the run can test all of them.",
@@ -53,7 +53,7 @@ def assumptions(declaration: Declaration, rounds: int) -> tuple[str, ...]:
     else:
         lines.append("Published are at most: certificate, report, tally, no-click counts, one digest of the rounds and the commitment to the "
                      "segments' digests; what they reveal is paid for.")
-    if declaration.method != "factor-closed":
+    if declaration.method not in FACTOR_METHODS:
         lines.append("The accumulation theorem holds in the form stated under \"source\"; this program's constants were checked against "
                      "the published figures of experiments, not against a proof of its own.")
         lines.append("Secrecy is meant in the usual either-or form: the run is accepted with probability at most the soundness error, or "

@@ -95,6 +95,7 @@ def verify_bundle(data: bytes, *, rounds: RoundFiles | None = None, seed: Binary
     papers = _papers(files, report, log)
     _trail(files, papers, found, log)
     _certificate(papers, log)
+    _table(papers, log)
     _score(papers, log)
     if rounds is None:
         log.left_open("that tally and digests are those of the sealed rounds; give the round files.")
@@ -224,6 +225,18 @@ def _certificate(papers: _Papers, log: _Log) -> None:
                          f"{recomputed.outcome}, {recomputed.certified_length} bits)", code="wrong-certificate")
     log.right("certificate", f"recomputed from declaration and tally: {recomputed.outcome}, "
                              f"{recomputed.certified_length} bits.")
+
+
+def _table(papers: _Papers, log: _Log) -> None:
+    """A general score table once more, by a program written apart from the one that certifies."""
+    if papers.declaration.method != "factor-table":
+        return
+    from extractor.seal import table_check
+
+    if not table_check.table_holds(documents.declaration_document(papers.declaration)):
+        raise ProofError("the score table of the declaration was not found valid by the second check: a quantum strategy may "
+                         "earn more than it is worth", code="table-not-valid")
+    log.right("table", "found valid over all quantum strategies a second time, by separately written code.")
 
 
 def _score(papers: _Papers, log: _Log) -> None:

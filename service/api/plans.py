@@ -8,8 +8,8 @@ from typing import Any
 from fastapi import APIRouter
 
 from extractor import pipeline
+from extractor.bell.rigs import optimal_rig
 from extractor.documents import tally_from
-from extractor.entropy.planning import score_of
 from extractor.errors import InputError
 from extractor.model import METHODS, Convention, Settings
 from service.api import schemas
@@ -31,11 +31,12 @@ def plan(body: schemas.PlanRequest, identity: Anybody) -> Any:
     """With `rounds`: what they may be expected to certify, per method. With `length`: how many rounds that takes."""
     if (body.rounds is None) == (body.length is None):
         raise InputError("give either rounds or length", code="bad-usage", field="/rounds")
-    if (body.score is None) == (body.calibration is None):
-        raise InputError("give either score or calibration", code="bad-usage", field="/score")
+    if [body.score, body.calibration, body.rig].count(None) != 2:
+        raise InputError("give exactly one of score, calibration and rig", code="bad-usage", field="/score")
     s = body.settings
     settings = Settings(s.test_probability, tuple(s.distribution), tuple(s.generation), s.bias)
-    common = dict(score=_score(body), settings=settings, soundness=body.soundness, output_rule=body.output_rule,
+    common = dict(**_expectation(body, settings), settings=settings, convention=_convention(body),
+            soundness=body.soundness, output_rule=body.output_rule,
                   disclosure=body.disclosure, order=body.order, confidence=body.confidence)
     if not _ROOM.acquire(timeout=WAIT_S):
         raise Unavailable("others are planning; try again", code="planning-busy", retry_after_s=WAIT_S)
@@ -54,14 +55,25 @@ def _plans(body: schemas.PlanRequest, common: dict[str, Any]) -> tuple[list[dict
             rounds = body.rounds or pipeline.rounds_for(body.length, method=method, **common)
             plans.append(pipeline.plan(rounds=rounds, method=method, **common).document())
         except InputError as fault:
-            if body.method or fault.code in _ALWAYS_WRONG:
+            only_here = fault.code == "score-out-of-range" and body.score is None
+            if body.method or fault.code in _ALWAYS_WRONG and not only_here:
                 raise
             others.append({"method": method, "code": fault.code, "detail": str(fault)})
     return plans, others
 
 
-def _score(body: schemas.PlanRequest) -> float:
-    if body.calibration is None:
-        return body.score
-    tally = tally_from([cell.model_dump() for cell in body.calibration], "/calibration")
-    return score_of(tally, Convention(tuple(body.convention.minus), body.convention.flip))
+def _convention(body: schemas.PlanRequest) -> Convention:
+    return Convention(tuple(body.convention.minus), body.convention.flip)
+
+
+def _expectation(body: schemas.PlanRequest, settings: Settings) -> dict[str, Any]:
+    """Score and behaviour, as `pipeline.plan` takes them."""
+    if body.calibration is not None:
+        tally = tally_from([cell.model_dump() for cell in body.calibration], "/calibration")
+        return pipeline.expect(calibration=tally, convention=_convention(body))
+    if body.rig is None:
+        return pipeline.expect(score=body.score)
+    r = body.rig
+    return pipeline.expect(model=optimal_rig(
+        r.efficiency, r.pair_probability, r.visibility, settings=settings, convention=_convention(body),
+        dark_counts=(r.dark_counts,) * 2), convention=_convention(body))

@@ -14,7 +14,7 @@ EXAMPLE_DIGEST = "sha256:9f86d081884c7d659a2feaa0c55ad015a3bf4f1b2b0b822cd15d6c1
 TIME = "2031-05-04T09:30:00Z"
 State = Literal["open", "sealed", "working", "certified", "refused", "failed", "collected", "erased"]
 Stage = Literal["tally", "certify", "seed", "hash", "publish"]
-Method = Literal["factor-closed", "eat-2018", "eat-2019"]
+Method = Literal["factor-table", "factor-closed", "eat-2018", "eat-2019"]
 OutputRule = Literal["fixed", "credit"]
 Disclosure = Literal["confidential", "public"]
 Bit = Literal[0, 1]
@@ -281,13 +281,24 @@ class CellIn(_In):
     n: int = Field(ge=0, le=2**50)
 
 
+class RigModel(_In):
+    """A photon-pair rig at its best state and angles."""
+
+    visibility: float = Field(1.0, ge=0, le=1)
+    efficiency: float = Field(1.0, ge=0, le=1, description="of both sides")
+    pair_probability: float = Field(1.0, gt=0, le=1, description="of a pair in a round")
+    dark_counts: float = Field(0.0, ge=0, le=1, description="probability of a dark count per side and round")
+
+
 class PlanRequest(_In):
-    """Rounds or a wanted length (one of them), and an expected score or a calibration tally (one of them)."""
+    """Rounds or a wanted length (one of them), and an expected score, a calibration tally or a modelled rig (one of
+    them)."""
 
     rounds: int | None = Field(None, ge=1, le=2**50)
     length: int | None = Field(None, ge=1, le=2**50, description="bits; the plan then says how many rounds they take")
     score: float | None = Field(None, description="expected winning probability, between 0.75 and 0.853553")
     calibration: list[CellIn] | None = Field(None, max_length=32, description="counts of earlier rounds")
+    rig: RigModel | None = None
     convention: ConventionDocument = Field(default_factory=ConventionDocument)
     settings: SettingsDocument = Field(default_factory=SettingsDocument)
     soundness: float = Field(gt=0, lt=1)

@@ -44,6 +44,8 @@ def add(commands: Any) -> None:
     parser.add_argument(
         "--length", type=whole, metavar="BITS", help="wanted certified length, in bits; prints the rounds it needs"
     )
+    parser.add_argument("--round-rate", type=real, metavar="R",
+            help="rounds per second; prints the hours the run takes")
     _add_choices(parser, method_required=False)
     add_rig_options(parser)
 
@@ -86,12 +88,26 @@ def add(commands: Any) -> None:
 
 
 def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> None:
-    expectation = parser.add_mutually_exclusive_group(required=True)
+    expectation = parser.add_argument_group("what to expect of the rig",
+            "exactly one of: a score, a calibration, a modelled rig")
     expectation.add_argument(
         "--score", type=real, metavar="W", help="expected winning probability, between 0.75 and 0.853553"
     )
     expectation.add_argument(
         "--calibration", metavar="COUNTS.json", help="tally of earlier rounds, as written by: bellassay tally --json"
+    )
+    expectation.add_argument("--rig-visibility", type=real, metavar="V",
+            help="modelled rig: visibility, 0 to 1 (default 1)")
+    expectation.add_argument(
+        "--rig-efficiency", type=real, metavar="ETA", help="modelled rig: efficiency of both sides, 0 to 1 (default 1)"
+    )
+    expectation.add_argument(
+        "--rig-pair-probability", type=real, metavar="P",
+                help="modelled rig: probability of a pair per round (default 1)"
+    )
+    expectation.add_argument(
+        "--rig-dark-counts", type=real, metavar="D",
+                help="modelled rig: probability of a dark count per side (default 0)"
     )
     parser.add_argument(
         "--soundness", type=real, required=True, metavar="E", help="soundness error, in (0, 1), such as 1e-10"
@@ -133,12 +149,29 @@ def read_calibration(path: str) -> Tally:
         ) from None
 
 
-def _score(args: argparse.Namespace, reading: Reading) -> float:
-    if args.score is not None:
-        return args.score
-    from extractor.entropy.planning import score_of
+ALWAYS_WRONG = ("score-out-of-range", "out-of-range", "bad-number", "bad-settings")
+RIG_OPTIONS = ("rig_visibility", "rig_efficiency", "rig_pair_probability", "rig_dark_counts")
 
-    return score_of(read_calibration(args.calibration), reading.convention)
+
+def _expectation(args: argparse.Namespace, reading: Reading) -> dict[str, Any]:
+    """What the options say about the rig: one of score, calibration (Tally) and model (a rig at its best state and
+    angles)."""
+    modelled = any(getattr(args, name) is not None for name in RIG_OPTIONS)
+    if (args.score is not None) + (args.calibration is not None) + modelled != 1:
+        raise InputError("give exactly one of --score, --calibration and the --rig-… options", code="bad-usage")
+    if args.score is not None:
+        return {"score": args.score}
+    if args.calibration is not None:
+        return {"calibration": read_calibration(args.calibration)}
+    from extractor.bell.rigs import optimal_rig
+
+    visibility, efficiency, pairs, dark = (getattr(args, name) for name in RIG_OPTIONS)
+    no_click = reading.no_click if None not in reading.no_click else None
+    return {"model": optimal_rig(
+        1.0 if efficiency is None else efficiency, 1.0 if pairs is None else pairs,
+                1.0 if visibility is None else visibility,
+        settings=reading.settings, convention=reading.convention, no_click=no_click,  # type: ignore[arg-type]
+        dark_counts=(dark or 0.0,) * 2)}
 
 
 def plan(args: argparse.Namespace) -> int:
@@ -146,10 +179,13 @@ def plan(args: argparse.Namespace) -> int:
 
     if (args.rounds is None) == (args.length is None):
         raise InputError("give either --rounds (prints the length) or --length (prints the rounds)", code="bad-usage")
+    if args.round_rate is not None and args.round_rate <= 0:
+        raise InputError("a rate of rounds per second is needed, above 0", code="out-of-range", field="/round_rate")
     reading = reading_of(args)
     common = dict(
-        score=_score(args, reading),
+        **pipeline.expect(**_expectation(args, reading), convention=reading.convention),
         settings=reading.settings,
+        convention=reading.convention,
         soundness=args.soundness,
         disclosure=args.disclosure,
         output_rule=args.output_rule,
@@ -160,14 +196,17 @@ def plan(args: argparse.Namespace) -> int:
     for method in (args.method,) if args.method else METHODS:
         try:
             rounds = args.rounds or pipeline.rounds_for(args.length, method=method, **common)
-            plans.append(pipeline.plan(rounds=rounds, method=method, **common).document())
+            document = pipeline.plan(rounds=rounds, method=method, **common).document()
+            plans.append(document | {"hours": rounds / args.round_rate / 3600 if args.round_rate else None})
         except InputError as fault:
-            if args.method or fault.code in ("score-out-of-range", "out-of-range", "bad-number", "bad-settings"):
+            only_here = fault.code == "score-out-of-range" and args.score is None    # the calibration may still suit another
+            if args.method or fault.code in ALWAYS_WRONG and not only_here:
                 raise
             refusals.append({"method": method, "code": fault.code, "detail": str(fault)})
     document = {"score": common["score"], "wanted_length": args.length, "plans": plans, "not_applicable": refusals}
     # One method asked for: its plan is the result. Several: a list of plans.
-    emit(args, document["plans"][0] | {"wanted_length": args.length} if args.method else document, _plan_lines(args, document))
+    emit(args, document["plans"][0] | {"wanted_length": args.length} if args.method else document,
+            _plan_lines(args, document))
     return DONE
 
 
@@ -182,7 +221,8 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
             ),
             ("winning probability", f"{document['score']:.7f}"),
             ("soundness error", f"{args.soundness:g}"),
-            *([("no method exceeds", f"{plans[0]['limit_rate']:.6f} bits per round")] if plans else []),
+            *([("no method exceeds",
+                    f"{max(p['limit_rate'] for p in plans):.4g} bits per round (i.i.d. limit)")] if plans else []),
         ]
     )
     if plans:
@@ -198,9 +238,15 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
             p = plans[0]
             lines += rows(
                 [
-                    ("credit", f"{p['rate']:.6f} bits per round"),
+                    ("credit", f"{p['rate']:.4g} bits per round"),
                     ("penalty", f"{p['penalty_bits']:.1f} bits"),
                     ("seed needed", f"{grouped(p['seed_bits'])} bits"),
+                    ("settings take", f"{grouped(p['settings_bits'])} bits"),
+                    ("net balance", f"{grouped(p['net_bits'])} bits: out, less settings and seed"),
+                    ("of the limit", f"{100 * p['limit_fraction']:.1f} % reached"),
+                    *([("it takes", f"{p['hours']:.3g} hours at {args.round_rate:g} rounds per second")] if p["hours"] else []),
+                    *([(f"reached with {chance}", f"{grouped(bits)} bits") for chance,
+                            bits in (p["reached"] or {}).items()]),
                 ]
             )
         lines += [f"{p['method']}: {p['note']}" for p in plans if p.get("note")]
@@ -217,9 +263,7 @@ def declare(args: argparse.Namespace) -> int:
     if out.exists():
         raise InputError("exists already; a declaration is never replaced", code="file-exists", file=str(out))
     reading = reading_of(args)
-    expectation: dict[str, Any] = (
-        {"score": args.score} if args.calibration is None else {"calibration": read_calibration(args.calibration)}
-    )
+    expectation = _expectation(args, reading)
     declaration = pipeline.declare(
         rig=args.rig,
         purpose=args.purpose,

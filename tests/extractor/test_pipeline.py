@@ -122,5 +122,5 @@ def test_a_declaration_from_a_calibration_names_it():
     assert declaration.calibration_rounds == 10**6 and declaration.calibration_digest.startswith("sha256:")
     assert declaration.expected_score == pytest.approx(Rig(visibility=0.9).winning_probability, abs=2e-3)
     for wrong in (dict(calibration=calibration, score=0.8), {}):
-        with pytest.raises(InputError, match="either"):
+        with pytest.raises(InputError, match="exactly one"):
             pipeline.declare(**wrong, **arguments)

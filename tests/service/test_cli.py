@@ -238,9 +238,24 @@ def test_plan_compares_methods(capsys) -> None:
     for score in ("0.80", "0.84"):
         code, out, _ = run(capsys, "plan", "--rounds", "1e7", "--score", score, "--soundness", "1e-9", "--json")
         plans = {plan["method"]: plan["certified_length"] for plan in json.loads(out)["plans"]}
-        assert code == 0 and set(plans) == {"factor-closed", "eat-2018", "eat-2019"}
+        assert code == 0 and set(plans) == {"factor-table", "factor-closed", "eat-2018", "eat-2019"}
         lengths.append(plans["factor-closed"])
     assert 0 < lengths[0] < lengths[1]
+
+
+def test_plan_of_a_modelled_rig_names_rate_order_and_table(capsys) -> None:
+    """plan --method factor-table --json answers with rate, order, certified length, validity bound and table at the
+    top."""
+    code, out, _ = run(capsys, "plan", "--rig-visibility", "0.93", "--rounds", "1e6", "--soundness", "1e-6",
+            "--order", "1.01",
+                       "--method", "factor-table", "--round-rate", "1000", "--json")
+    plan = json.loads(out)
+    assert code == 0 and plan["order"] == 1.01 and plan["validity_bound"] <= 1 and len(plan["table"]["test"]) == 16
+    assert 1.04 < plan["rate"] < 1.06 and plan["certified_length"] > 10**6
+    assert plan["hours"] == pytest.approx(1e6 / 3.6e6) and plan["net_bits"] < 0
+    code, _, err = run(capsys, "plan", "--rig-visibility", "0.93", "--score", "0.8", "--rounds", "1e6", "--soundness",
+            "1e-6")
+    assert code == 2 and "exactly one" in err
 
 
 def test_plan_finds_the_rounds_a_length_needs(capsys) -> None:
@@ -275,7 +290,7 @@ def test_a_method_that_does_not_apply_is_listed_with_its_reason(capsys) -> None:
         capsys, "plan", "--rounds", "1e7", "--score", "0.8", "--soundness", "1e-9", "--output-rule", "credit", "--json"
     )
     result = json.loads(out)
-    assert code == 0 and [plan["method"] for plan in result["plans"]] == ["factor-closed"]
+    assert code == 0 and [plan["method"] for plan in result["plans"]] == ["factor-table", "factor-closed"]
     assert {item["method"] for item in result["not_applicable"]} == {"eat-2018", "eat-2019"}
 
 

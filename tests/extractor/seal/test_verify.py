@@ -175,3 +175,14 @@ def test_what_was_given_but_not_enough_is_said() -> None:
     assert "hash of the rounds" in quiet(data, bits=run.bits, bits_salt=casting.BITS_SALT).unchecked[-1]
     both = quiet(data, rounds=run.files(), seed=io.BytesIO(run.seed))
     assert "against anything" in both.unchecked[-1]
+
+
+def test_a_general_table_is_checked_a_second_time(monkeypatch) -> None:
+    """A factor-table bundle is verified with its table found valid twice; if the second check fails, there is no verdict."""
+    made = casting.run(casting.declared(method="factor-table", order=1.05, output_bits=1000), (3000,), after=("result",))
+    assert made.certificate.outcome == "certified"
+    verdict = verify_bundle(made.bundle(), say=lambda text: None)
+    assert "table" in dict(verdict.checks)
+    monkeypatch.setattr("extractor.seal.table_check.ROUNDING", 1.0)     # an impossible margin: nothing passes
+    with pytest.raises(ProofError, match="second check"):
+        verify_bundle(made.bundle(), say=lambda text: None)

@@ -56,7 +56,7 @@ def test_an_empty_ledger_answers(start) -> None:
 def test_planning(north: Caller) -> None:
     """Rounds give lengths per method, a length gives rounds, a calibration gives the score."""
     answer = north.post("/v1/plan", {"rounds": 10**8, "score": 0.8, "soundness": 1e-10}).json()
-    assert {plan["method"] for plan in answer["plans"]} == {"factor-closed", "eat-2018", "eat-2019"}
+    assert {plan["method"] for plan in answer["plans"]} == {"factor-table", "factor-closed", "eat-2018", "eat-2019"}
     assert all(plan["certified_length"] > 0 and plan["seed_bits"] > 0 for plan in answer["plans"])
     answer = north.post("/v1/plan", {"length": 1000, "score": 0.85, "soundness": 1e-3,
                                      "method": "factor-closed"}).json()
@@ -65,6 +65,17 @@ def test_planning(north: Caller) -> None:
     answer = north.post("/v1/plan", {"rounds": 10**6, "calibration": counts, "soundness": 1e-3,
                                      "method": "factor-closed"}).json()
     assert abs(answer["score"] - 0.853) < 0.01
+
+
+def test_planning_a_modelled_rig(north: Caller) -> None:
+    """A rig model is an expectation like a score; the plan of factor-table carries its order, rate, validity bound
+    and table."""
+    answer = north.post("/v1/plan", {"rounds": 10**6, "rig": {"visibility": 0.93}, "soundness": 1e-6, "order": 1.01,
+                                     "method": "factor-table"}).json()
+    (plan,) = answer["plans"]
+    assert plan["order"] == 1.01 and 1.04 < plan["rate"] < 1.06 and plan["validity_bound"] <= 1
+    assert plan["certified_length"] > 10**6 and len(plan["table"]["test"]) == 16
+    problem(north.post("/v1/plan", {"rounds": 10**6, "rig": {}, "score": 0.8, "soundness": 1e-6}), 422, "bad-usage")
 
 
 @pytest.mark.parametrize("change, code", [
