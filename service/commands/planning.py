@@ -18,10 +18,11 @@ from service.commands.common import (
     read_json,
     real,
     rows,
+    several,
     whole,
     write_file,
 )
-from service.commands.rounds import Reading, add_rig_options, reading_of
+from service.commands.rounds import Reading, add_rig_options, reading_from, reading_of
 
 
 def add(commands: Any) -> None:
@@ -91,7 +92,9 @@ def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> N
         "--score", type=real, metavar="W", help="expected winning probability, between 0.75 and 0.853553"
     )
     expectation.add_argument(
-        "--calibration", metavar="COUNTS.json", help="tally of earlier rounds, as written by: bellassay tally --json"
+        "--calibration",
+        metavar="COUNTS.json",
+        help="tally of earlier rounds, as written by: bellassay tally --json; how it was read is taken over",
     )
     parser.add_argument(
         "--soundness", type=real, required=True, metavar="E", help="soundness error, in (0, 1), such as 1e-10"
@@ -121,24 +124,31 @@ def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> N
     )
 
 
-def read_calibration(path: str) -> Tally:
-    """The tally in a file written by `bellassay tally --json`."""
+def read_calibration(path: str) -> tuple[Tally, Reading | None]:
+    """The tally in a file written by `bellassay tally --json`, and how it was read if the file says so."""
     from extractor.documents import tally_from
 
     try:
-        return tally_from(read_json(path))
+        document = read_json(path)
+        reading = None
+        if isinstance(document, dict) and "reading" in document:
+            reading = reading_from(document["reading"], path)
+        return tally_from(document), reading
     except InputError as fault:
         raise InputError(
             fault.message, code=fault.code, file=fault.file or path, row=fault.row, field=fault.field
         ) from None
 
 
-def _score(args: argparse.Namespace, reading: Reading) -> float:
+def _score(args: argparse.Namespace) -> tuple[float, Reading]:
+    """The expected winning probability, and how the rounds are read."""
     if args.score is not None:
-        return args.score
+        return args.score, reading_of(args)
     from extractor.entropy.planning import score_of
 
-    return score_of(read_calibration(args.calibration), reading.convention)
+    tally, calibrated = read_calibration(args.calibration)
+    reading = reading_of(args, calibrated)
+    return score_of(tally, reading.convention), reading
 
 
 def plan(args: argparse.Namespace) -> int:
@@ -146,9 +156,9 @@ def plan(args: argparse.Namespace) -> int:
 
     if (args.rounds is None) == (args.length is None):
         raise InputError("give either --rounds (prints the length) or --length (prints the rounds)", code="bad-usage")
-    reading = reading_of(args)
+    score, reading = _score(args)
     common = dict(
-        score=_score(args, reading),
+        score=score,
         settings=reading.settings,
         soundness=args.soundness,
         disclosure=args.disclosure,
@@ -176,7 +186,7 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
     lines = rows(
         [
             *(
-                [("wanted length", f"{grouped(args.length)} bits")]
+                [("wanted length", several(args.length, "bit"))]
                 if args.length
                 else [("rounds", grouped(args.rounds))]
             ),
@@ -200,7 +210,7 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
                 [
                     ("credit", f"{p['rate']:.6f} bits per round"),
                     ("penalty", f"{p['penalty_bits']:.1f} bits"),
-                    ("seed needed", f"{grouped(p['seed_bits'])} bits"),
+                    ("seed needed", several(p["seed_bits"], "bit")),
                 ]
             )
         lines += [f"{p['method']}: {p['note']}" for p in plans if p.get("note")]
@@ -216,10 +226,9 @@ def declare(args: argparse.Namespace) -> int:
     out = Path(args.out)
     if out.exists():
         raise InputError("exists already; a declaration is never replaced", code="file-exists", file=str(out))
-    reading = reading_of(args)
-    expectation: dict[str, Any] = (
-        {"score": args.score} if args.calibration is None else {"calibration": read_calibration(args.calibration)}
-    )
+    tally, calibrated = read_calibration(args.calibration) if args.calibration is not None else (None, None)
+    reading = reading_of(args, calibrated)
+    expectation: dict[str, Any] = {"score": args.score} if tally is None else {"calibration": tally}
     declaration = pipeline.declare(
         rig=args.rig,
         purpose=args.purpose,
@@ -265,7 +274,7 @@ def declare(args: argparse.Namespace) -> int:
                 ("soundness error", f"{d.soundness:g}"),
                 (
                     "output",
-                    f"{'exactly' if d.output_rule == 'fixed' else 'at most'} {grouped(d.output_bits)} bits",
+                    f"{'exactly' if d.output_rule == 'fixed' else 'at most'} {several(d.output_bits, 'bit')}",
                 ),
                 *(
                     [("recorded as", result["recorded"]["id"]), ("at", result["recorded"]["time"])]

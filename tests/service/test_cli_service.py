@@ -138,7 +138,7 @@ def test_a_run_goes_from_files_to_verified_bits(lab: Lab, run, tmp_path: Path) -
         lab.client.ledger_key(),
     ]
     code, out, err = run("verify", tmp_path / "bundle.zip", *everything)
-    assert code == 0 and len(out.splitlines()) > 5, err
+    assert code == 0 and len(out.splitlines()) > 5 and "none not made" in out, err
     code, out, _ = run("verify", tmp_path / "bundle.zip", *everything, "--json")
     assert code == 0 and json.loads(out)["verified"] and json.loads(out)["checks"]
 
@@ -163,6 +163,12 @@ def test_a_changed_bundle_or_bits_fail_the_verification(lab: Lab, run, tmp_path:
         "verify", tmp_path / "bundle.zip", "--bits", tmp_path / "wrong.bin", "--bits-salt", tmp_path / "bits-salt.hex"
     )
     assert code == 1 and "bits" in err and "Traceback" not in err
+    code, out, _ = run("verify", tmp_path / "bundle.zip")
+    assert code == 0 and f"{out.count('not checked: ')} not made:" in out and "  - whose key signed\n" in out
+    code, _, err = run("verify", tmp_path / "bundle.zip", "--key", "nonsense")
+    assert code == 2 and "--key: the value is not an Ed25519 verifier key" in err
+    code, _, err = run("verify", tmp_path / "bundle.zip", "--bits-salt", "nonsense")
+    assert code == 2 and "--bits-salt: is neither" in err
     bundle = bytearray((tmp_path / "bundle.zip").read_bytes())
     bundle[len(bundle) // 2] ^= 1
     (tmp_path / "wrong.zip").write_bytes(bundle)
