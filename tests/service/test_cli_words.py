@@ -119,3 +119,60 @@ def test_certify_says_what_is_odd_about_the_rounds(source: str, tmp_path: Path, 
         assert "diagnostics (they certify nothing)\n  - " in out
         code, out, err = run(capsys, *command, "--out", tmp_path / "two", "--json")
         assert any(item["flag"] for item in json.loads(out)["diagnostics"])
+
+
+def test_the_bare_program_helps_and_says_its_version(capsys) -> None:
+    """Without a command: the help and exit code 2."""
+    code, out, err = run(capsys)
+    assert code == 2 and "COMMAND" in err and "exit codes" in err and not out
+    code, out, _ = run(capsys, "--version")
+    assert code == 0 and out.startswith("bellassay ")
+
+
+@pytest.mark.parametrize(
+    "text, words",
+    [
+        ("1e30", "'1e30' is larger than 9007199254740991"),
+        ("1,000,000", "'1,000,000': write 1000000 or 1e6"),
+        ("12 500 000", "'12 500 000': write 12500000 or 1.25e7"),
+        ("1.5", "'1.5' is not a whole number"),
+        ("nan", "'nan' is not a whole number"),
+        ("inf", "'inf' is larger than"),
+        ("many", "'many' is not a whole number"),
+    ],
+)
+def test_numbers_in_another_spelling_are_refused_with_the_right_one(text: str, words: str, capsys) -> None:
+    """A number that cannot be taken is answered with what to write."""
+    code, out, err = run(capsys, "plan", "--rounds", text, "--score", "0.8", "--soundness", "1e-9", "--json")
+    error = json.loads(out)["error"]
+    assert code == 2 and words in err and words in error["detail"] and error["code"] == "bad-usage"
+
+
+def test_a_comma_in_a_number_is_refused_with_the_point(capsys) -> None:
+    """0,8 is understood, but not guessed."""
+    code, _, err = run(capsys, "plan", "--rounds", "1e6", "--score", "0,8", "--soundness", "1e-9")
+    assert code == 2 and "'0,8': write 0.8" in err
+
+
+@pytest.mark.parametrize(
+    "words, code",
+    [
+        (["tally", "nowhere.npz"], "no-file"),
+        (["plan", "--score", "0.8", "--soundness", "1e-9"], "bad-usage"),
+        (["watch", "r1", "--url", "http://127.0.0.1:9", "--token", "t"], "unreachable"),
+    ],
+)
+def test_trouble_is_an_object_for_programs(words: list[str], code: str, monkeypatch, capsys) -> None:
+    """With --json, exit code 2 comes with one object on standard output, and the sentence stays on standard error."""
+    monkeypatch.setattr("service.transport.FIRST_PAUSE_S", 0.001)
+    status, out, err = run(capsys, *words, "--json")
+    error = json.loads(out)["error"]
+    assert status == 2 and error["code"] == code and error["detail"] in err
+
+
+def test_a_variable_that_names_no_setting_is_told(tmp_path: Path, monkeypatch, capsys) -> None:
+    """A slip of the pen in an environment file would otherwise go unnoticed."""
+    monkeypatch.setenv("BELLASSAY_SEGMENT_BITES", "1")
+    monkeypatch.setenv("BELLASSAY_PYTHON", "python3")
+    _, _, err = run(capsys, "token", "create", "anna", "--data", tmp_path)
+    assert "BELLASSAY_SEGMENT_BITES names no setting" in err and "BELLASSAY_PYTHON" not in err
