@@ -10,6 +10,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
+import requests
 
 from service.cli import main
 from service.client import Client, ServiceProblem
@@ -326,6 +327,15 @@ def test_a_broken_file_is_refused_with_its_name_and_row(lab: Lab, run, tmp_path:
     path.write_text("x,y,a,b\n0,0,1,1\n0,1,7,0\n")
     code, _, err = run("submit", path, "--declaration", lab.declaration("broken"))
     assert code == 2 and str(path) in err and err.count("row 2") == 1 and "Traceback" not in err
+
+
+def test_the_interface_explains_every_request(lab: Lab) -> None:
+    """Each request has a summary and a description, and each of its parameters says what it is."""
+    document = requests.get(f"{lab.url}/openapi.json", timeout=10).json()
+    for path, operations in document["paths"].items():
+        for operation in operations.values():
+            assert operation["summary"] and operation["description"], path
+            assert all(parameter.get("description") for parameter in operation.get("parameters", ())), path
 
 
 def test_tokens_are_listed_and_revoked(lab: Lab, run) -> None:
