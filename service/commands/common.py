@@ -11,6 +11,7 @@ import os
 import re
 import sys
 import textwrap
+import threading
 import time
 from collections.abc import Callable, Iterable
 from pathlib import Path
@@ -272,6 +273,7 @@ class Progress:
         self._label, self._total, self._unit, self._clock = label, total, unit, clock
         self._begin = self._said = clock()
         self._at = self._said_at = 0
+        self._over = threading.Event()
         self._bar = None
         if sys.stderr.isatty():
             from tqdm import tqdm
@@ -287,18 +289,33 @@ class Progress:
             self._bar.update(amount)
         elif due(self._clock() - self._said, (self._at - self._said_at) / self._total if self._total else 0.0):
             self._said, self._said_at = self._clock(), self._at
-            part = f"{100 * self._at / self._total:.0f} %" if self._total else f"{volume(self._at) if self._unit == 'B' else grouped(self._at) + ' ' + self._unit}"
+            part = self._part()
             rate = self._at / max(self._said - self._begin, 1e-9)
             note(f"{self._label}: {part}, {volume(rate) if self._unit == 'B' else f'{rate:.3g} {self._unit}'}/s")
 
     def move_to(self, place: int) -> None:
         self.advance(place - self._at)
 
+    def _part(self) -> str:
+        if self._total:
+            return f"{100 * self._at / self._total:.0f} %"
+        return volume(self._at) if self._unit == "B" else f"{grouped(self._at)} {self._unit}"
+
+    def _stay_in_touch(self) -> None:
+        """Says every now and then that a long step without news is still under way."""
+        while not self._over.wait(SPARSE_LINE_S):
+            if self._clock() - self._said >= SPARSE_LINE_S:
+                self._said = self._clock()
+                note(f"{self._label}: {self._part()}, at work for {duration(self._said - self._begin)}")
+
     def __enter__(self) -> Progress:
+        if self._bar is None:
+            threading.Thread(target=self._stay_in_touch, daemon=True).start()
         return self
 
     def __exit__(
         self, kind: type[BaseException] | None, fault: BaseException | None, trace: TracebackType | None
     ) -> None:
+        self._over.set()
         if self._bar is not None:
             self._bar.close()
