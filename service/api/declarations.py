@@ -57,6 +57,8 @@ def record(body: schemas.DeclarationDocument, parts: PartsOf, identity: Submitte
             responses=documented(401, 422))
 def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 50, before: Before = None,
           everybody: Annotated[bool, Query(description="of all owners (admin only)")] = False) -> Any:
+    """Newest first, a page at a time; `next` is the address of the next page. A token with the scope admin may ask
+    for everybody's."""
     limit = min(limit, parts.settings.page_items)
     owner = None if everybody and identity.may("admin") else identity.owner
     with parts.store.read() as reading:
@@ -67,7 +69,8 @@ def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 
 
 @router.get("/{declaration}", response_model=schemas.RecordedDeclaration, operation_id="read_declaration",
             summary="Read a declaration", responses=documented(401, 404))
-def read(declaration: str, parts: PartsOf, identity: Anybody) -> Any:
+def read(declaration: schemas.DeclarationId, parts: PartsOf, identity: Anybody) -> Any:
+    """The document as it was recorded, with its digest, its time and its place in the ledger."""
     with parts.store.read() as reading:
         return _shown(owned_declaration(reading, declaration, identity))
 

@@ -16,6 +16,7 @@ from anyio.to_thread import run_sync
 from fastapi import APIRouter, Header, Request
 from fastapi.responses import StreamingResponse
 
+from service.api import schemas
 from service.api.auth import Anybody, PartsOf
 from service.api.bodies import StrictRoute
 from service.api.problems import sending
@@ -34,8 +35,11 @@ _LAST = Header(alias="Last-Event-ID", max_length=18, pattern=r"^\d*$",
 @router.get("/{run}/events", operation_id="watch_run", summary="The run as server-sent events, until it is final",
             response_class=StreamingResponse, responses=sending(
                 MEDIA_TYPE, "events named `run`: data is the Run as JSON, id its number within the run", 401, 404, 422))
-def events(run: str, request: Request, parts: PartsOf, identity: Anybody,
+def events(run: schemas.RunId, request: Request, parts: PartsOf, identity: Anybody,
            last: Annotated[str | None, _LAST] = None) -> Any:
+    """Every change of state or stage is an event with an id; the share done in between comes in events without
+    one. After a broken line send the last id as Last-Event-ID, and nothing is missed. The stream ends with a final
+    state."""
     with parts.store.read() as reading:
         owned_run(reading, run, identity)
     return StreamingResponse(_stream(request, parts, run, int(last or 0)), media_type=MEDIA_TYPE,

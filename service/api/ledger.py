@@ -17,24 +17,34 @@ from service.api.problems import documented, sending
 from service.ledger import ENTRIES_LIMIT
 
 router = APIRouter(prefix="/v1/ledger", tags=["ledger"], route_class=StrictRoute)
-Place = Annotated[int | None, Query(ge=0, le=2**53 - 1)]
+def _place(text: str) -> Any:
+    return Query(ge=0, le=2**53 - 1, description=text)
+
+
+Start = Annotated[int | None, _place("index of the first entry")]
+End = Annotated[int | None, _place("index after the last entry")]
+Size = Annotated[int | None, _place("number of entries of the tree the proof ends in")]
+Index = Annotated[int | None, _place("index of the entry to prove included")]
+Old = Annotated[int | None, _place("number of entries of the smaller, earlier tree")]
 
 
 @router.get("/checkpoint", operation_id="read_checkpoint", summary="The newest checkpoint, a signed note",
             response_class=PlainTextResponse, responses=sending("text/plain", "C2SP tlog-checkpoint", 401))
 def checkpoint(parts: PartsOf, identity: Anybody) -> Any:
+    """Origin, size and root hash of the ledger, signed. Keep one: a later checkpoint can be proved to contain it."""
     return parts.ledger.checkpoint()
 
 
 @router.get("/key", operation_id="read_ledger_key", summary="The key that signs the checkpoints",
             response_class=PlainTextResponse, responses=sending("text/plain", "C2SP signed-note verifier key", 401))
 def key(parts: PartsOf, identity: Anybody) -> Any:
+    """Name, key id and Ed25519 public key in one line. Auditors should get it in another way than from a bundle."""
     return parts.ledger.verifier_text + "\n"
 
 
 @router.get("/entries", response_model=schemas.LedgerEntries, operation_id="read_entries",
             summary="Entries start <= index < end", responses=documented(401, 422))
-def entries(parts: PartsOf, identity: Anybody, start: Place = 0, end: Place = None) -> Any:
+def entries(parts: PartsOf, identity: Anybody, start: Start = 0, end: End = None) -> Any:
     """At most 1000 at once; without `end`, as many as there are."""
     size = parts.ledger.size()
     start = start or 0
@@ -46,7 +56,7 @@ def entries(parts: PartsOf, identity: Anybody, start: Place = 0, end: Place = No
 
 @router.get("/proof", response_model=schemas.LedgerProof, response_model_exclude_none=True, operation_id="read_proof",
             summary="Inclusion of an entry (index) or consistency of two trees (old)", responses=documented(401, 422))
-def proof(parts: PartsOf, identity: Anybody, size: Place = None, index: Place = None, old: Place = None) -> Any:
+def proof(parts: PartsOf, identity: Anybody, size: Size = None, index: Index = None, old: Old = None) -> Any:
     """RFC 9162 proofs in the tree of the first `size` entries; without `size`, in the newest tree."""
     if (index is None) == (old is None):
         raise InputError("give either index or old", code="bad-usage", field="index")

@@ -18,6 +18,7 @@ OPENMETRICS = "application/openmetrics-text; version=1.0.0; charset=utf-8"
 @router.get("/livez", response_model=schemas.Health, operation_id="livez", summary="The process runs",
             responses=documented(503))
 def livez(request: Request) -> Any:
+    """Open to everybody. 503 means that the disk failed and the service must be started again."""
     if request.app.state.failed.is_set():
         raise Problem(503, "storage-failed",
                       "the disk failed; the service must be started again after the operator has acted")
@@ -27,6 +28,8 @@ def livez(request: Request) -> Any:
 @router.get("/readyz", response_model=schemas.Health, operation_id="readyz", summary="Requests can be served",
             responses=documented(503, 507))
 def readyz(request: Request, parts: PartsOf) -> Any:
+    """Open to everybody. 503 or 507: not just now, because the service is stopping, its database is busy or its
+    disk is full."""
     livez(request)
     if request.app.state.stopping.is_set():
         raise Problem(503, "stopping", "the service is being stopped")
@@ -39,6 +42,7 @@ def readyz(request: Request, parts: PartsOf) -> Any:
             response_class=PlainTextResponse,
             responses=sending("application/openmetrics-text", "OpenMetrics text", 401, 403))
 def metrics(request: Request, parts: PartsOf, identity: Auditor) -> Any:
+    """Runs by state, size of the ledger, free disk, uploads and answers, as OpenMetrics text."""
     with parts.store.read() as reading:
         runs, head = reading.count_runs(), reading.ledger_head()
     state = request.app.state

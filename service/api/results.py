@@ -28,7 +28,9 @@ _PENDING = ("open", "sealed", "working")
 @router.get("/{run}/certificate", operation_id="read_certificate", response_class=Response,
             summary="The certificate or refusal, canonical JSON",
             responses=sending(JSON, "RFC 8785 bytes, as committed to in the ledger", 401, 403, 404, 409))
-def certificate(run: str, parts: PartsOf, identity: Reader) -> Any:
+def certificate(run: schemas.RunId, parts: PartsOf, identity: Reader) -> Any:
+    """What is certified and how it was computed: terms, credits of the cells, assumptions. A refusal is a
+    certificate of length 0 with its reason."""
     row = _run(parts, run, identity)
     if row.certificate is None:
         raise _not_yet(parts, row, "certificate")
@@ -37,7 +39,9 @@ def certificate(run: str, parts: PartsOf, identity: Reader) -> Any:
 
 @router.get("/{run}/report", operation_id="read_report", response_class=Response, summary="The audit report",
             responses=sending(JSON, "RFC 8785 bytes", 401, 403, 404, 406, 409))
-def report(run: str, request: Request, parts: PartsOf, identity: Reader) -> Any:
+def report(run: schemas.RunId, request: Request, parts: PartsOf, identity: Reader) -> Any:
+    """Declaration, certificate, score, diagnostics, digests and the versions that computed them in one signed
+    document."""
     row = _run(parts, run, identity)
     if not _accepts(request.headers.get("accept", "*/*"), JSON):
         raise Problem(406, "not-acceptable", f"the report is available as {JSON}")
@@ -50,7 +54,8 @@ def report(run: str, request: Request, parts: PartsOf, identity: Reader) -> Any:
 @router.get("/{run}/bundle", operation_id="read_bundle", response_class=FileResponse,
             summary="Report, proofs and what else an offline check needs, as a zip file",
             responses=sending(ZIP, "zip file", 401, 403, 404, 409))
-def bundle(run: str, parts: PartsOf, identity: Reader) -> Any:
+def bundle(run: schemas.RunId, parts: PartsOf, identity: Reader) -> Any:
+    """Everything `bellassay verify` needs to check the run without asking anybody."""
     row = _run(parts, run, identity)
     if row.report_digest is None or row.state in _PENDING:
         raise _not_yet(parts, row, "bundle")
@@ -63,7 +68,7 @@ def bundle(run: str, parts: PartsOf, identity: Reader) -> Any:
             responses={**sending(BINARY, "the bits, packed from the least significant bit of each byte on; the header "
                                          "Bits-Salt opens the commitment", 401, 403, 404, 409, 410, 416),
                        206: {"description": "the range asked for"}})
-def bits(run: str, request: Request, parts: PartsOf, identity: Collector) -> Any:
+def bits(run: schemas.RunId, request: Request, parts: PartsOf, identity: Collector) -> Any:
     """May be fetched as often as needed until the collection is confirmed; from then on nobody can get them again."""
     stored = open_bits(parts, _run(parts, run, identity))
     headers = {"Repr-Digest": digest_header(stored.digest), "Bits-Salt": stored.salt.hex()}
@@ -73,7 +78,7 @@ def bits(run: str, request: Request, parts: PartsOf, identity: Collector) -> Any
 @router.post("/{run}/collection", response_model=schemas.Collection, operation_id="confirm_collection",
              summary="Confirm that the bits are safely stored: the run's key is erased",
              responses=documented(400, 401, 403, 404, 409, 415, 422))
-def collection(run: str, body: schemas.CollectionRequest, parts: PartsOf, identity: Collector) -> Any:
+def collection(run: schemas.RunId, body: schemas.CollectionRequest, parts: PartsOf, identity: Collector) -> Any:
     """Of many callers exactly one wins. Rounds, seed and bits of the run cannot be read by anybody afterwards."""
     row, index = confirm(parts, _run(parts, run, identity), bytes.fromhex(body.digest.removeprefix("sha256:")))
     return {"collected": row.collected_time, "ledger_index": index}

@@ -25,6 +25,8 @@ router = APIRouter(prefix="/v1/runs", tags=["runs"], route_class=StrictRoute)
              responses=documented(400, 401, 403, 404, 415, 422, 507))
 def open_(body: schemas.NewRun, parts: PartsOf, identity: Submitter, response: Response,
           key: IdempotencyKey = None) -> Any:
+    """Makes an empty run that takes segments until it is sealed. Every run is made under one declaration and never
+    changes to another. With an Idempotency-Key a repeated request gives the same run."""
     with parts.store.read() as reading:
         declaration = owned_declaration(reading, body.declaration, identity)
     parts.blobs.need(0)
@@ -53,6 +55,7 @@ def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 
           declaration: Annotated[str | None,
                                  Query(max_length=64, description="only runs under this declaration")] = None,
           everybody: Annotated[bool, Query(description="of all owners (admin only)")] = False) -> Any:
+    """Newest first, a page at a time; `next` is the address of the next page."""
     limit = min(limit, parts.settings.page_items)
     owner = None if everybody and identity.may("admin") else identity.owner
     with parts.store.read() as reading:
@@ -65,7 +68,9 @@ def list_(parts: PartsOf, identity: Anybody, response: Response, limit: Limit = 
 @router.get("/{run}", response_model=schemas.Run, operation_id="read_run",
             summary="State, stage, share done, time left",
             responses=documented(401, 404))
-def read(run: str, parts: PartsOf, identity: Anybody) -> Any:
+def read(run: schemas.RunId, parts: PartsOf, identity: Anybody) -> Any:
+    """What the run is doing now, how far it has come, what it waits for, and what came out. Ask as often as you
+    like, or watch its events instead."""
     with parts.store.read() as reading:
         return describe(reading, [owned_run(reading, run, identity)])[0]
 
@@ -73,7 +78,8 @@ def read(run: str, parts: PartsOf, identity: Anybody) -> Any:
 @router.post("/{run}/seal", status_code=202, response_model=schemas.Run, operation_id="seal_run",
              summary="No more rounds: fixes what arrived in the ledger and starts the job",
              responses=documented(400, 401, 403, 404, 409, 415, 422))
-def seal_(run: str, body: schemas.SealRequest, parts: PartsOf, identity: Submitter, response: Response) -> Any:
+def seal_(run: schemas.RunId, body: schemas.SealRequest, parts: PartsOf, identity: Submitter,
+          response: Response) -> Any:
     """The numbers must be what arrived. Repeating the call is harmless. Ask Location again after Retry-After seconds,
     or watch the events."""
     with parts.store.read() as reading:

@@ -5,8 +5,9 @@ Strict: an unknown field, a number in quotes or a boolean in place of a number i
 
 from __future__ import annotations
 
-from typing import Any, Literal
+from typing import Annotated, Any, Literal
 
+from fastapi import Path
 from pydantic import BaseModel, ConfigDict, Field
 
 DIGEST = r"^sha256:[0-9a-f]{64}$"
@@ -18,6 +19,8 @@ Method = Literal["factor-table", "factor-closed", "eat-2018", "eat-2019"]
 OutputRule = Literal["fixed", "credit"]
 Disclosure = Literal["confidential", "public"]
 Bit = Literal[0, 1]
+RunId = Annotated[str, Path(description="id of the run", examples=["r5ce1a7d02b94e683"])]
+DeclarationId = Annotated[str, Path(description="id of the recorded declaration", examples=["d41f0a9b3c5d7e682"])]
 
 
 class _In(BaseModel):

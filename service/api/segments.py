@@ -41,7 +41,7 @@ Number = Annotated[int, Path(description="1, 2, ... in the order in which the ro
             summary="Upload a round file as a segment of the run", openapi_extra=_OCTETS,
             responses={200: {"model": schemas.Segment, "description": "this segment had arrived before"},
                        **documented(400, 401, 403, 404, 408, 409, 410, 413, 422, 503, 507)})
-async def put_segment(run: str, number: Number, request: Request, response: Response, parts: PartsOf,
+async def put_segment(run: schemas.RunId, number: Number, request: Request, response: Response, parts: PartsOf,
                       identity: Submitter, name: Name = None) -> Any:
     """Any accepted format (NPY, NPZ, CSV). The body is streamed to encrypted storage; once its digest agrees, the
     rounds are read, checked, packed and counted. 201 means all of that is done and durable. Repeating the request is
@@ -78,7 +78,9 @@ async def put_segment(run: str, number: Number, request: Request, response: Resp
 
 @router.get("/{run}/segments", response_model=schemas.Segments, operation_id="list_segments",
             summary="What has arrived; send what is missing", responses=documented(401, 404))
-def list_segments(run: str, parts: PartsOf, identity: Anybody) -> Any:
+def list_segments(run: schemas.RunId, parts: PartsOf, identity: Anybody) -> Any:
+    """The segments that are stored, with digest, number of rounds and counts. After an interruption a sender
+    compares the digests and sends only what is missing."""
     with parts.store.read() as reading:
         owned_run(reading, run, identity)
         rows = reading.list_segments(run)
@@ -88,7 +90,7 @@ def list_segments(run: str, parts: PartsOf, identity: Anybody) -> Any:
 @router.put("/{run}/seed", response_model=schemas.SeedReceipt, operation_id="upload_seed",
             summary="Upload the seed of a waiting run",
             openapi_extra=_OCTETS, responses=documented(400, 401, 403, 404, 408, 409, 410, 413, 422, 503, 507))
-async def put_seed(run: str, request: Request, parts: PartsOf, identity: Submitter) -> Any:
+async def put_seed(run: schemas.RunId, request: Request, parts: PartsOf, identity: Submitter) -> Any:
     """Exactly `seed.bits_needed` uniform bits of the run, packed from the least significant bit of each byte on, tail
     bits zero. Nobody may have known them before the run was sealed."""
     digest = content_digest(request)
@@ -116,7 +118,9 @@ async def put_seed(run: str, request: Request, parts: PartsOf, identity: Submitt
 
 @router.get("/{run}/seed", operation_id="read_seed", summary="The seed that was used", response_class=StreamingResponse,
             responses=sending(BINARY, "the seed, packed", 401, 403, 404, 409, 410))
-def get_seed(run: str, request: Request, parts: PartsOf, identity: Reader) -> Any:
+def get_seed(run: schemas.RunId, request: Request, parts: PartsOf, identity: Reader) -> Any:
+    """For an audit: the seed that was drawn by the service or uploaded. It can be read from the time it is fixed
+    until the bits are collected. Range is honoured."""
     with parts.store.read() as reading:
         row = owned_run(reading, run, identity)
     if row.state in ("collected", "erased"):

@@ -8,20 +8,23 @@ from __future__ import annotations
 import argparse
 import json
 import os
+import re
 import sys
 import textwrap
+import threading
 import time
 from collections.abc import Callable, Iterable
 from pathlib import Path
 from types import TracebackType
-from typing import Any
+from typing import Any, NoReturn
 
 from extractor.errors import InputError
 
 DONE, REFUSED, BAD_INPUT = 0, 1, 2
 WIDTH = 80
 LARGEST_DOCUMENT_BYTES = 64 << 20
-SPARSE_LINE_S = 10.0  # between progress lines when stderr is not a terminal
+# When stderr is not a terminal: a line at the latest after SPARSE_LINE_S, earlier when a tenth more is done.
+SPARSE_LINE_S, DENSE_LINE_S, SPARSE_SHARE = 5.0, 1.0, 0.1
 
 
 class _Help(argparse.RawDescriptionHelpFormatter):
@@ -29,11 +32,24 @@ class _Help(argparse.RawDescriptionHelpFormatter):
         super().__init__(prog, max_help_position=26, width=WIDTH - 2)
 
 
+class UsageError(SystemExit):
+    """The command line makes no sense; the reason has been printed."""
+
+    def __init__(self, message: str) -> None:
+        self.message = message
+        super().__init__(BAD_INPUT)
+
+
 class Parser(argparse.ArgumentParser):
     """Options are never guessed from their first letters: a script must not change meaning with a new option."""
 
     def __init__(self, **options: Any) -> None:
         super().__init__(formatter_class=_Help, allow_abbrev=False, **options)
+
+    def error(self, message: str) -> NoReturn:
+        self.print_usage(sys.stderr)
+        note(f"{self.prog}: {message}")
+        raise UsageError(message)
 
 
 def add_command(
@@ -67,13 +83,25 @@ def whole(text: str) -> int:
         return int(text.replace("_", ""))
     except ValueError:
         pass
+    if re.fullmatch(r"[0-9]{1,3}([,.' ][0-9]{3})+", text) and (text.count(".") != 1):
+        raise argparse.ArgumentTypeError(f"{text!r}: write {_plainly(re.sub(r'[^0-9]', '', text))}")
     try:
         value = float(text)
     except ValueError:
         value = float("nan")
-    if not (value == value and abs(value) < 2**53 and value == int(value)):
+    if abs(value) >= 2**53:
+        raise argparse.ArgumentTypeError(f"{text!r} is larger than {2**53 - 1}, the largest number taken in this form")
+    if value != value or value != int(value):
         raise argparse.ArgumentTypeError(f"{text!r} is not a whole number")
     return int(value)
+
+
+def _plainly(digits: str) -> str:
+    """1000000 or 1e6."""
+    front = digits.rstrip("0")
+    if not front or len(digits) - len(front) < 3:
+        return digits
+    return f"{digits} or {front[0]}{'.' + front[1:] if front[1:] else ''}e{len(digits) - 1}"
 
 
 def real(text: str) -> float:
@@ -81,6 +109,8 @@ def real(text: str) -> float:
         value = float(text)
     except ValueError:
         value = float("nan")
+        if re.fullmatch(r"[0-9]*,[0-9]+", text):
+            raise argparse.ArgumentTypeError(f"{text!r}: write {text.replace(',', '.')}") from None
     if value != value or value in (float("inf"), float("-inf")):
         raise argparse.ArgumentTypeError(f"{text!r} is not a number")
     return value
@@ -226,8 +256,15 @@ def duration(seconds: float) -> str:
     return f"{minutes} min {rest} s" if minutes < 60 else f"{minutes // 60} h {minutes % 60} min"
 
 
+def due(seconds: float, share: float) -> bool:
+    """Whether a progress line is due, so long after the last one and so much further."""
+    return seconds >= SPARSE_LINE_S or (seconds >= DENSE_LINE_S and share >= SPARSE_SHARE)
+
+
 class Progress:
-    """A progress bar on a terminal; elsewhere a line on stderr every ten seconds, none if it is over before.
+    """A progress bar on a terminal; elsewhere a line on stderr for every tenth and at least every five seconds.
+
+    What is over within a second is worth no line.
 
     total  in `unit` ("B" is scaled to kB, MB, ...), None if unknown
     """
@@ -235,7 +272,8 @@ class Progress:
     def __init__(self, label: str, total: int | None, unit: str, clock: Callable[[], float] = time.monotonic) -> None:
         self._label, self._total, self._unit, self._clock = label, total, unit, clock
         self._begin = self._said = clock()
-        self._at = 0
+        self._at = self._said_at = 0
+        self._over = threading.Event()
         self._bar = None
         if sys.stderr.isatty():
             from tqdm import tqdm
@@ -249,20 +287,35 @@ class Progress:
         self._at += amount
         if self._bar is not None:
             self._bar.update(amount)
-        elif self._clock() - self._said >= SPARSE_LINE_S:
-            self._said = self._clock()
-            part = f"{100 * self._at / self._total:.0f} %" if self._total else f"{self._at:.3g} {self._unit}"
+        elif due(self._clock() - self._said, (self._at - self._said_at) / self._total if self._total else 0.0):
+            self._said, self._said_at = self._clock(), self._at
+            part = self._part()
             rate = self._at / max(self._said - self._begin, 1e-9)
-            note(f"{self._label}: {part}, {rate:.3g} {self._unit}/s")
+            note(f"{self._label}: {part}, {volume(rate) if self._unit == 'B' else f'{rate:.3g} {self._unit}'}/s")
 
     def move_to(self, place: int) -> None:
         self.advance(place - self._at)
 
+    def _part(self) -> str:
+        if self._total:
+            return f"{100 * self._at / self._total:.0f} %"
+        return volume(self._at) if self._unit == "B" else f"{grouped(self._at)} {self._unit}"
+
+    def _stay_in_touch(self) -> None:
+        """Says every now and then that a long step without news is still under way."""
+        while not self._over.wait(SPARSE_LINE_S):
+            if self._clock() - self._said >= SPARSE_LINE_S:
+                self._said = self._clock()
+                note(f"{self._label}: {self._part()}, at work for {duration(self._said - self._begin)}")
+
     def __enter__(self) -> Progress:
+        if self._bar is None:
+            threading.Thread(target=self._stay_in_touch, daemon=True).start()
         return self
 
     def __exit__(
         self, kind: type[BaseException] | None, fault: BaseException | None, trace: TracebackType | None
     ) -> None:
+        self._over.set()
         if self._bar is not None:
             self._bar.close()

@@ -22,9 +22,11 @@ from service.commands.common import (
     bullets,
     emit,
     grouped,
+    note,
     read_bytes,
     read_declaration,
     rows,
+    several,
     whole,
     write_file,
 )
@@ -100,6 +102,11 @@ def certify(args: argparse.Namespace) -> int:
     from extractor.seal import canonical
 
     declaration = read_declaration(args.declaration)
+    if args.seed and declaration.seed_source == "system":
+        note("mind: the declaration says that the seed is drawn from the operating system, but --seed gives another one")
+    elif not args.seed and declaration.seed_source == "upload":
+        note("mind: the declaration says that you bring the seed, but no --seed is given: it is drawn from the operating")
+        note("system if the run is certified")
     out = Path(args.out)
     for name in ("certificate.json", "bits.bin"):
         if (out / name).exists():
@@ -110,10 +117,12 @@ def certify(args: argparse.Namespace) -> int:
         total, digest = pipeline.read_run(pipeline.batches_of(opened(args.files), declaration.rules), progress.move_to)
     certificate = pipeline.certify(declaration, total)
     document = certificate_document(certificate)
+    diagnostics = [item.document() for item in pipeline.look(declaration, total)[1]]
     out.mkdir(parents=True, exist_ok=True)
     result: dict[str, Any] = {
         "outcome": certificate.outcome,
         "certificate": document,
+        "diagnostics": diagnostics,
         "records_digest": digest,
         "files": {"certificate": str(out / "certificate.json")},
     }
@@ -129,7 +138,13 @@ def certify(args: argparse.Namespace) -> int:
     emit(
         args,
         result,
-        certificate_lines(certificate) + [""] + rows((name, path) for name, path in result["files"].items()),
+        [
+            *certificate_lines(certificate),
+            "",
+            *diagnostic_lines(diagnostics),
+            "",
+            *rows((name, path) for name, path in result["files"].items()),
+        ],
     )
     return DONE if bits is not None else REFUSED
 
@@ -193,18 +208,26 @@ def _extract(
     return bits
 
 
+def diagnostic_lines(diagnostics: list[dict[str, Any]]) -> list[str]:
+    """The flagged diagnostics as sentences."""
+    flagged = [item["sentence"] for item in diagnostics if item["flag"]]
+    if not flagged:
+        return ["diagnostics: nothing odd (they certify nothing)"]
+    return ["diagnostics (they certify nothing)", *bullets(flagged)]
+
+
 def certificate_lines(certificate: Certificate) -> list[str]:
     """A certificate for reading: outcome, numbers, terms."""
     c = certificate
     lines = rows(
         [
             ("outcome", c.outcome if c.reason is None else f"{c.outcome}: {c.reason}"),
-            ("certified length", f"{grouped(c.certified_length)} bits"),
-            ("available", f"{grouped(c.available_bits)} bits"),
+            ("certified length", several(c.certified_length, "bit")),
+            ("available", several(c.available_bits, "bit")),
             ("rounds", f"{grouped(c.rounds)} of {grouped(c.declared_rounds)} declared"),
             ("soundness error", f"{c.soundness:g}"),
             ("method", c.method),
-            ("seed", f"{grouped(c.seed_bits)} bits"),
+            ("seed", several(c.seed_bits, "bit")),
         ]
     )
     lines += ["", "terms (bits)"] + [f"  {term.name:<28}{_bits(term.bits):>22}" for term in c.terms]
@@ -226,6 +249,7 @@ def _bits(value: float) -> str:
 def verify(args: argparse.Namespace) -> int:
     from extractor.seal.verify import verify_bundle
 
+    trusted_key, bits_salt = _key_of(args.key), salt_of(args.bits_salt)
     data = read_bytes(args.bundle, LARGEST_BUNDLE_BYTES)
     sentences: list[str] = []
 
@@ -246,8 +270,8 @@ def verify(args: argparse.Namespace) -> int:
                 rounds=rounds or None,
                 seed=seed,
                 bits=bits,
-                bits_salt=salt_of(args.bits_salt),
-                trusted_key=_text_or_file(args.key),
+                bits_salt=bits_salt,
+                trusted_key=trusted_key,
                 say=say,
             )
         except ProofError as fault:
@@ -266,8 +290,10 @@ def verify(args: argparse.Namespace) -> int:
         },
         [
             "",
-            f"verified: run {verdict.run}, {verdict.outcome}, {grouped(verdict.certified_length)} bits",
-            *(["what could not be checked is marked above"] if verdict.unchecked else []),
+            f"verified: run {verdict.run}, {verdict.outcome}, {several(verdict.certified_length, 'bit')}; "
+            f"{several(len(verdict.checks), 'check')} made, {len(verdict.unchecked) or 'none'} not made"
+            + (":" if verdict.unchecked else ""),
+            *bullets(sentence.partition(";")[0] for sentence in verdict.unchecked),
         ],
     )
     return DONE
@@ -285,11 +311,21 @@ def salt_of(text: str | None) -> bytes | None:
     except ValueError:
         salt = b""
     if len(salt) != 32:
-        raise InputError("is neither 64 hexadecimal digits nor a file with them", code="bad-salt", field="--bits-salt")
+        raise InputError("--bits-salt: is neither 64 hexadecimal digits nor a file with them", code="bad-salt")
     return salt
 
 
-def _text_or_file(text: str | None) -> str | None:
-    if text is not None and os.path.exists(text):
-        return read_bytes(text, 65536).decode("utf-8", "replace").strip()
-    return text
+def _key_of(text: str | None) -> str | None:
+    """The verifier key in an option or in the file it names. Errors raised: InputError that names the option."""
+    from extractor.seal import note as notes
+
+    if text is None:
+        return None
+    is_file = os.path.exists(text)
+    key = (read_bytes(text, 65536).decode("utf-8", "replace") if is_file else text).strip()
+    try:
+        notes.Verifier.from_text(key)
+    except InputError as fault:
+        place = f"the file {text} " if is_file else "" if fault.message.startswith("the key") else "the value "
+        raise InputError(f"--key: {place}{fault.message}", code=fault.code) from None
+    return key

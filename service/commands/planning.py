@@ -18,10 +18,11 @@ from service.commands.common import (
     read_json,
     real,
     rows,
+    several,
     whole,
     write_file,
 )
-from service.commands.rounds import Reading, add_rig_options, reading_of
+from service.commands.rounds import Reading, add_rig_options, reading_from, reading_of
 
 
 def add(commands: Any) -> None:
@@ -94,7 +95,9 @@ def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> N
         "--score", type=real, metavar="W", help="expected winning probability, between 0.75 and 0.853553"
     )
     expectation.add_argument(
-        "--calibration", metavar="COUNTS.json", help="tally of earlier rounds, as written by: bellassay tally --json"
+        "--calibration",
+        metavar="COUNTS.json",
+        help="tally of earlier rounds, as written by: bellassay tally --json; how it was read is taken over",
     )
     expectation.add_argument("--rig-visibility", type=real, metavar="V",
             help="modelled rig: visibility, 0 to 1 (default 1)")
@@ -137,12 +140,16 @@ def _add_choices(parser: argparse.ArgumentParser, *, method_required: bool) -> N
     )
 
 
-def read_calibration(path: str) -> Tally:
-    """The tally in a file written by `bellassay tally --json`."""
+def read_calibration(path: str) -> tuple[Tally, Reading | None]:
+    """The tally in a file written by `bellassay tally --json`, and how it was read if the file says so."""
     from extractor.documents import tally_from
 
     try:
-        return tally_from(read_json(path))
+        document = read_json(path)
+        reading = None
+        if isinstance(document, dict) and "reading" in document:
+            reading = reading_from(document["reading"], path)
+        return tally_from(document), reading
     except InputError as fault:
         raise InputError(
             fault.message, code=fault.code, file=fault.file or path, row=fault.row, field=fault.field
@@ -153,25 +160,33 @@ ALWAYS_WRONG = ("score-out-of-range", "out-of-range", "bad-number", "bad-setting
 RIG_OPTIONS = ("rig_visibility", "rig_efficiency", "rig_pair_probability", "rig_dark_counts")
 
 
-def _expectation(args: argparse.Namespace, reading: Reading) -> dict[str, Any]:
+def _expectation(args: argparse.Namespace) -> tuple[dict[str, Any], Reading]:
     """What the options say about the rig: one of score, calibration (Tally) and model (a rig at its best state and
-    angles)."""
+    angles); and how the rounds are read."""
     modelled = any(getattr(args, name) is not None for name in RIG_OPTIONS)
     if (args.score is not None) + (args.calibration is not None) + modelled != 1:
         raise InputError("give exactly one of --score, --calibration and the --rig-… options", code="bad-usage")
-    if args.score is not None:
-        return {"score": args.score}
     if args.calibration is not None:
-        return {"calibration": read_calibration(args.calibration)}
+        tally, calibrated = read_calibration(args.calibration)
+        return {"calibration": tally}, reading_of(args, calibrated)
+    reading = reading_of(args)
+    if args.score is not None:
+        return {"score": args.score}, reading
     from extractor.bell.rigs import optimal_rig
 
     visibility, efficiency, pairs, dark = (getattr(args, name) for name in RIG_OPTIONS)
     no_click = reading.no_click if None not in reading.no_click else None
-    return {"model": optimal_rig(
-        1.0 if efficiency is None else efficiency, 1.0 if pairs is None else pairs,
-                1.0 if visibility is None else visibility,
-        settings=reading.settings, convention=reading.convention, no_click=no_click,  # type: ignore[arg-type]
-        dark_counts=(dark or 0.0,) * 2)}
+    return {
+        "model": optimal_rig(
+            1.0 if efficiency is None else efficiency,
+            1.0 if pairs is None else pairs,
+            1.0 if visibility is None else visibility,
+            settings=reading.settings,
+            convention=reading.convention,
+            no_click=no_click,  # type: ignore[arg-type]
+            dark_counts=(dark or 0.0,) * 2,
+        )
+    }, reading
 
 
 def plan(args: argparse.Namespace) -> int:
@@ -181,9 +196,9 @@ def plan(args: argparse.Namespace) -> int:
         raise InputError("give either --rounds (prints the length) or --length (prints the rounds)", code="bad-usage")
     if args.round_rate is not None and args.round_rate <= 0:
         raise InputError("a rate of rounds per second is needed, above 0", code="out-of-range", field="/round_rate")
-    reading = reading_of(args)
+    expectation, reading = _expectation(args)
     common = dict(
-        **pipeline.expect(**_expectation(args, reading), convention=reading.convention),
+        **pipeline.expect(**expectation, convention=reading.convention),
         settings=reading.settings,
         convention=reading.convention,
         soundness=args.soundness,
@@ -215,7 +230,7 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
     lines = rows(
         [
             *(
-                [("wanted length", f"{grouped(args.length)} bits")]
+                [("wanted length", several(args.length, "bit"))]
                 if args.length
                 else [("rounds", grouped(args.rounds))]
             ),
@@ -240,7 +255,7 @@ def _plan_lines(args: argparse.Namespace, document: dict[str, Any]) -> list[str]
                 [
                     ("credit", f"{p['rate']:.4g} bits per round"),
                     ("penalty", f"{p['penalty_bits']:.1f} bits"),
-                    ("seed needed", f"{grouped(p['seed_bits'])} bits"),
+                    ("seed needed", several(p["seed_bits"], "bit")),
                     ("settings take", f"{grouped(p['settings_bits'])} bits"),
                     ("net balance", f"{grouped(p['net_bits'])} bits: out, less settings and seed"),
                     ("of the limit", f"{100 * p['limit_fraction']:.1f} % reached"),
@@ -262,8 +277,7 @@ def declare(args: argparse.Namespace) -> int:
     out = Path(args.out)
     if out.exists():
         raise InputError("exists already; a declaration is never replaced", code="file-exists", file=str(out))
-    reading = reading_of(args)
-    expectation = _expectation(args, reading)
+    expectation, reading = _expectation(args)
     declaration = pipeline.declare(
         rig=args.rig,
         purpose=args.purpose,
@@ -309,7 +323,7 @@ def declare(args: argparse.Namespace) -> int:
                 ("soundness error", f"{d.soundness:g}"),
                 (
                     "output",
-                    f"{'exactly' if d.output_rule == 'fixed' else 'at most'} {grouped(d.output_bits)} bits",
+                    f"{'exactly' if d.output_rule == 'fixed' else 'at most'} {several(d.output_bits, 'bit')}",
                 ),
                 *(
                     [("recorded as", result["recorded"]["id"]), ("at", result["recorded"]["time"])]

@@ -14,9 +14,9 @@ from service.client import DEFAULT_URL, Client
 from service.commands.common import (
     DONE,
     REFUSED,
-    SPARSE_LINE_S,
     add_command,
     bullets,
+    due,
     duration,
     emit,
     note,
@@ -91,14 +91,15 @@ def follow(client: Client, run_id: str, *, until_seed: bool = False, seed_hint: 
 
     seed_hint  the command that sends a seed, said once if the run waits for one
     """
-    said, said_at, bar, run = None, 0.0, None, None
+    said, said_at, share, bar = None, 0.0, 0.0, None
     try:
         for run in client.watch(run_id):
             place = (run["state"], run["stage"], run["waiting_for"])
             if bar is None:
                 bar = _StageBar()
-            if not bar.show(run) and (place != said or time.monotonic() - said_at >= SPARSE_LINE_S):
-                said, said_at = place, time.monotonic()
+            done = run["fraction"] or 0.0
+            if not bar.show(run) and (place != said or due(time.monotonic() - said_at, done - share)):
+                said, said_at, share = place, time.monotonic(), done
                 note(_progress_text(run))
             if run["waiting_for"] == "seed":
                 if until_seed:

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import argparse
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import BinaryIO
+from typing import Any, BinaryIO
 
 from extractor.errors import InputError
 from extractor.model import Convention, RoundRules, Settings
@@ -70,28 +70,111 @@ class Reading:
     def rules(self) -> RoundRules:
         return RoundRules(self.settings.test_probability, self.settings.generation, self.no_click)
 
+    def document(self) -> dict[str, Any]:
+        """By the names of the options; `reading_from` is the way back."""
+        settings = self.settings
+        return {
+            "test_probability": settings.test_probability,
+            "distribution": list(settings.distribution),
+            "generation": list(settings.generation),
+            "bias": settings.bias,
+            "minus": list(self.convention.minus),
+            "flip": self.convention.flip,
+            "no_click_a": self.no_click[0],
+            "no_click_b": self.no_click[1],
+        }
 
-def reading_of(args: argparse.Namespace) -> Reading:
-    """What the options say. Errors raised: InputError if a declaration is given together with values it fixes."""
-    single = ("minus", "flip", "no_click_a", "no_click_b", "test_probability", "generation", "distribution", "bias")
-    given = [name for name in single if getattr(args, name) is not None]
+
+READING_OPTIONS = tuple(Reading(Settings(), Convention(), (None, None)).document())
+
+
+def reading_from(document: object, file: str) -> Reading:
+    """The reading in a tally file. Errors raised: InputError with the file and the place."""
+    try:
+        if not isinstance(document, Mapping) or set(document) != set(READING_OPTIONS):
+            raise InputError(f"must have exactly the fields {', '.join(READING_OPTIONS)}", field="/reading")
+        for name in ("distribution", "generation", "minus"):
+            if not isinstance(document[name], list):
+                raise InputError("must be a list", field=f"/reading/{name}")
+        if not isinstance(document["flip"], bool):
+            raise InputError("is neither true nor false", field="/reading/flip")
+        for name in ("no_click_a", "no_click_b"):
+            if document[name] is not None and (type(document[name]) is not int or document[name] not in (0, 1)):
+                raise InputError("is none of 0, 1 and null", field=f"/reading/{name}")
+        return Reading(
+            Settings(
+                document["test_probability"],
+                tuple(document["distribution"]),  # type: ignore[arg-type]
+                tuple(document["generation"]),  # type: ignore[arg-type]
+                document["bias"],
+            ),
+            Convention(tuple(document["minus"]), document["flip"]),  # type: ignore[arg-type]
+            (document["no_click_a"], document["no_click_b"]),
+        )
+    except InputError as fault:
+        place = fault.field if (fault.field or "").startswith("/reading") else "/reading"
+        raise InputError(fault.message, code="bad-reading", file=file, field=place) from None
+
+
+def reading_of(args: argparse.Namespace, calibrated: Reading | None = None) -> Reading:
+    """What the options say, and where they say nothing, `calibrated`: how the calibration was read (else the defaults).
+
+    Errors raised: InputError if a declaration is given together with values it fixes, or a value that contradicts
+    the calibration.
+    """
+    given = [name for name in READING_OPTIONS if getattr(args, name) is not None]
     if getattr(args, "declaration", None):
         if given:
-            option = "--" + given[0].replace("_", "-")
-            raise InputError(f"{option} is fixed by the declaration; give one or the other", code="bad-usage")
+            raise InputError(f"{option_of(given[0])} is fixed by the declaration; give one or the other", code="bad-usage")
         declaration = read_declaration(args.declaration)
         return Reading(declaration.settings, declaration.convention, declaration.no_click)
 
-    def value(name: str, default: object) -> object:
-        return default if getattr(args, name) is None else getattr(args, name)
+    base = (calibrated or Reading(Settings(), Convention(), (None, None))).document()
+    values = dict(base)
+    for name in given:
+        value = getattr(args, name)
+        values[name] = list(value) if isinstance(value, tuple) else value
+        if calibrated is not None and values[name] != base[name]:
+            raise InputError(
+                f"{option_of(name)} ({_text(values[name])}) contradicts how this calibration was read "
+                f"({_text(base[name])}): leave the option out, or tally the calibration rounds again with it",
+                code="calibration-contradicted",
+                file=args.calibration,
+            )
+    return Reading(
+        Settings(
+            values["test_probability"], tuple(values["distribution"]), tuple(values["generation"]), values["bias"]
+        ),
+        Convention(tuple(values["minus"]), values["flip"]),
+        (values["no_click_a"], values["no_click_b"]),
+    )
 
-    settings = Settings(
-        value("test_probability", 1.0),
-        value("distribution", (0.25,) * 4),  # type: ignore[arg-type]
-        value("generation", (0, 0)),
-        value("bias", 0.0),
-    )  # type: ignore[arg-type]
-    return Reading(settings, Convention(args.minus or (1, 1), bool(args.flip)), (args.no_click_a, args.no_click_b))
+
+def option_of(name: str) -> str:
+    return "--" + name.replace("_", "-")
+
+
+def _text(value: Any) -> str:
+    """The value of an option as it is typed."""
+    if isinstance(value, list):
+        return ("," if len(value) > 2 else "").join(f"{part:g}" for part in value)
+    if value is None or isinstance(value, bool):
+        return "given" if value else "not given"
+    return f"{value:g}"
+
+
+def no_clicks_in(paths: Sequence[str | Path], rules: RoundRules) -> tuple[int, int]:
+    """How many outcomes on side a and on side b are no-clicks. Reads the files, unless every no-click is an error."""
+    from extractor.records.rounds import open_rounds
+
+    total = [0, 0]
+    if rules.no_click != (None, None):
+        for file, name in opened(paths):
+            source = open_rounds(file, name, rules)
+            for _ in source.batches():
+                pass
+            total = [total[side] + source.no_clicks[side] for side in (0, 1)]
+    return total[0], total[1]
 
 
 def opened(paths: Sequence[str | Path]) -> Iterator[tuple[BinaryIO, str]]:

@@ -21,6 +21,7 @@ SCOPES = {
     "admin": "everything",
 }
 DAY_S = 86_400
+SCRIPT_VARIABLES = ("BELLASSAY_PYTHON",)  # read by the scripts in deploy/
 
 
 def add(commands: Any) -> None:
@@ -133,6 +134,8 @@ def _settings(args: argparse.Namespace, **more: Any) -> Any:
     from service.settings import ServiceSettings, unknown_variables
 
     for name in unknown_variables(os.environ):
+        if name in SCRIPT_VARIABLES:
+            continue
         note(f"caution: {name} names no setting and is ignored")
     return ServiceSettings.load(os.environ, data=args.data, **more)
 

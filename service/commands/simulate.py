@@ -22,6 +22,7 @@ from service.commands.common import (
     real,
     rows,
     setting_pair,
+    several,
     whole,
     write_file,
 )
@@ -244,7 +245,7 @@ def simulate(args: argparse.Namespace) -> int:
         document | {"out": str(out), "seconds": seconds, "rounds_per_second": rate},
         rows(
             [
-                ("rounds", f"{grouped(args.rounds)} in {len(files)} file{'s' if len(files) > 1 else ''}"),
+                ("rounds", f"{grouped(args.rounds)} in {several(len(files), 'file')}"),
                 ("files", out / files[0]["file"] if len(files) == 1 else f"{out / names[0]} to {names[-1]}"),
                 ("how", out / "rig.json"),
                 *([] if memory else [("score of the rig", f"{rig.winning_probability:.7f} (S = {rig.chsh:.6f})")]),

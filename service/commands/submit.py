@@ -7,7 +7,7 @@ import json
 import os
 import time
 import uuid
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -222,6 +222,12 @@ def _naming(path: str, sent_as: str) -> Iterator[None]:
         raise problem.about(path, sent_as) from None
 
 
+def _digests(paths: Sequence[str]) -> list[bytes]:
+    """SHA-256 of each file."""
+    with Progress("computing SHA-256", sum(map(os.path.getsize, paths)), "B") as progress:
+        return [sha256_of(path, progress.advance) for path in paths]
+
+
 def _compare_segments(args: argparse.Namespace, client: Client, run: dict) -> None:
     """Errors raised: InputError unless the files given are the segments of a run that takes no more."""
     there = {segment["segment"]: segment["digest"] for segment in client.segments(run["id"])["segments"]}
@@ -232,8 +238,8 @@ def _compare_segments(args: argparse.Namespace, client: Client, run: dict) -> No
             "a sealed run takes no more rounds: new rounds need a new declaration and a new run",
             code="segments-differ",
         )
-    for k, path in enumerate(args.files, start=1):
-        if there.get(k) != "sha256:" + sha256_of(path).hex():
+    for k, (path, digest) in enumerate(zip(args.files, _digests(args.files)), start=1):
+        if there.get(k) != "sha256:" + digest.hex():
             raise InputError(
                 f"is not what run {run['id']}, which is {run['state']} already, received as segment {k}; a segment is "
                 "never replaced: new rounds need a new declaration and a new run",
@@ -252,20 +258,21 @@ def _send_segments(args: argparse.Namespace, client: Client, run: dict) -> dict:
             code="segments-differ",
         )
     sizes = [os.path.getsize(path) for path in args.files]
+    digests = _digests(args.files)
+    for k, (path, digest) in enumerate(zip(args.files, digests), start=1):
+        if k in there and there[k]["digest"] != "sha256:" + digest.hex():
+            raise InputError(
+                f"segment {k} arrived earlier with another content; a segment is never replaced",
+                code="segment-differs",
+                file=path,
+            )
     if there:
         note(f"{len(there)} of {several(len(sizes), 'segment')} had arrived before")
     started = time.monotonic()
     sent = 0
     with Progress("uploading", sum(sizes), "B") as progress:
-        for k, (path, size) in enumerate(zip(args.files, sizes), start=1):
-            digest = sha256_of(path)
+        for k, (path, size, digest) in enumerate(zip(args.files, sizes, digests), start=1):
             if k in there:
-                if there[k]["digest"] != "sha256:" + digest.hex():
-                    raise InputError(
-                        f"segment {k} arrived earlier with another content; a segment is never replaced",
-                        code="segment-differs",
-                        file=path,
-                    )
                 progress.advance(size)
                 continue
             with _naming(path, Path(path).name):

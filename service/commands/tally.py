@@ -6,8 +6,8 @@ import argparse
 from typing import TYPE_CHECKING, Any
 
 from extractor.model import SETTING_PAIRS, Tally
-from service.commands.common import DONE, Progress, add_command, bullets, emit, grouped, rows
-from service.commands.rounds import add_reading_options, opened, reading_of
+from service.commands.common import DONE, Progress, add_command, bullets, emit, grouped, note, rows
+from service.commands.rounds import Reading, add_reading_options, no_clicks_in, opened, reading_of
 
 if TYPE_CHECKING:
     from extractor.bell.score import Score
@@ -21,8 +21,8 @@ def add(commands: Any) -> None:
         "count the rounds of files and score them",
         """Reads round files (NPZ, NPY or CSV), checks every value, counts all cells (t, x, y, a, b) and prints the
         winning probability, the CHSH value, a p-value against local models with memory, and diagnostics. With --json
-        the output is also what --calibration of plan and declare takes. Several files are read as one run, in the
-        order given.""",
+        the output is also what --calibration of plan and declare takes; it says how the rounds were read, so that these
+        commands need not be told again. Several files are read as one run, in the order given.""",
         """
         bellassay tally calibration.npz --no-click-a 0 --no-click-b 0
         bellassay tally calibration.npz --json > calibration.json
@@ -41,14 +41,19 @@ def tally(args: argparse.Namespace) -> int:
     from service.commands.planning import read_calibration
 
     reading = reading_of(args)
-    calibration = read_calibration(args.calibration) if args.calibration else None
+    calibration, calibrated = read_calibration(args.calibration) if args.calibration else (None, None)
+    if calibrated is not None and calibrated != reading:
+        note(f"caution: {args.calibration} was read in another way than these rounds; comparing them says little")
     with Progress("reading", None, "rounds") as progress:
         total, digest = pipeline.read_run(pipeline.batches_of(opened(args.files), reading.rules), progress.move_to)
+    no_clicks = no_clicks_in(args.files, reading.rules)
     result = score(total, reading.convention, reading.settings, reading.no_click)
     diagnostics = diagnose(total, reading.convention, reading.settings, calibration)
     document = {
         "counts": tally_counts(total),
         "rounds": total.rounds,
+        "no_clicks": list(no_clicks),
+        "reading": reading.document(),
         "records_digest": digest,
         "score": result.winning_probability,
         "score_error": result.winning_probability_error,
@@ -58,11 +63,11 @@ def tally(args: argparse.Namespace) -> int:
         "details": result.document(),
         "diagnostics": [diagnostic.document() for diagnostic in diagnostics],
     }
-    emit(args, document, _lines(total, result, document))
+    emit(args, document, _lines(total, result, document, reading))
     return DONE
 
 
-def _lines(total: Tally, result: Score, document: dict[str, Any]) -> list[str]:
+def _lines(total: Tally, result: Score, document: dict[str, Any], reading: Reading) -> list[str]:
     lines: list[tuple[str, object]] = [("rounds", grouped(total.rounds)), ("test rounds", grouped(result.test_rounds))]
     if result.chsh is None:
         lines.append(("CHSH value S", result.note))
@@ -78,6 +83,14 @@ def _lines(total: Tally, result: Score, document: dict[str, Any]) -> list[str]:
         lines.append(("p-value", f"{_small(result.log10_p_value)} for local models, with memory"))
     if result.decisive.log10_p_value is not None:
         lines.append(("p-value, decisive", f"{_small(result.decisive.log10_p_value)}, from the decisive rounds alone"))
+    on_a, on_b = document["no_clicks"]
+    counted_as = ", ".join(
+        f"{side} counted as {value}" for side, value in zip("ab", reading.no_click) if value is not None
+    )
+    lines += [
+        ("no-clicks", f"{grouped(on_a)} on side a, {grouped(on_b)} on side b" + (f" ({counted_as})" if counted_as else "")),
+        ("read with", _reading_text(reading)),
+    ]
     text = rows([*lines, ("digest of rounds", document["records_digest"])])
     counts = total.test_counts()
     text += [
@@ -91,6 +104,19 @@ def _lines(total: Tally, result: Score, document: dict[str, Any]) -> list[str]:
     text += ["", "diagnostics (they certify nothing)" if flagged else "diagnostics: nothing odd (they certify nothing)"]
     text += bullets(item["sentence"] for item in flagged)
     return text
+
+
+def _reading_text(reading: Reading) -> str:
+    """Settings and convention in one line."""
+    settings, minus = reading.settings, reading.convention.minus
+    parts = [f"minus sign on settings {minus[0]}{minus[1]}" + (", b inverted" if reading.convention.flip else "")]
+    if settings.test_probability < 1:
+        x, y = settings.generation
+        parts.append(f"test probability {settings.test_probability:g}, generation settings {x}{y}")
+    parts.append("settings with probabilities " + ", ".join(f"{p:g}" for p in settings.distribution))
+    if settings.bias:
+        parts.append(f"bias up to {settings.bias:g}")
+    return "; ".join(parts)
 
 
 def _small(log10: float) -> str:

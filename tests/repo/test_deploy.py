@@ -93,6 +93,27 @@ def test_an_environment_that_works_is_kept(tmp_path: Path) -> None:
     assert done.returncode == 0 and done.stdout.strip() == str(inside / "python") and "making" not in done.stderr
 
 
+def project_with_environment(folder: Path) -> Path:
+    """A copy of deploy/ beside a .venv whose Python notes every use of pip."""
+    shutil.copytree(ROOT / "deploy", folder / "deploy")
+    python = folder / ".venv/bin/python"
+    python.parent.mkdir(parents=True)
+    noting = f'#!/bin/sh\ncase "$*" in *pip*) echo "$*" >> {folder}/pip;; *demo.py*) echo usage of the demo;; esac\n'
+    python.write_text(noting)
+    python.chmod(0o755)
+    return folder
+
+
+@pytest.mark.parametrize("script", ["check", "demo"])
+def test_asking_for_help_installs_nothing(script: str, tmp_path: Path) -> None:
+    """--help is answered at once; only the real thing installs."""
+    project = project_with_environment(tmp_path)
+    done = subprocess.run([project / "deploy" / script, "--help"], capture_output=True, text=True)
+    assert done.returncode == 0 and "usage" in done.stdout and not (project / "pip").exists()
+    subprocess.run([project / "deploy" / script], capture_output=True, text=True)
+    assert "install" in (project / "pip").read_text()
+
+
 def test_the_demo_explains_itself() -> None:
     """The demo's options are listed by --help."""
     done = subprocess.run([sys.executable, ROOT / "deploy/demo.py", "--help"], capture_output=True, text=True)

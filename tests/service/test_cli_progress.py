@@ -13,14 +13,20 @@ import pytest
 from service.commands.common import Progress, duration, grouped, rows, several, volume
 
 
-def test_without_a_terminal_a_line_comes_every_ten_seconds(capsys: pytest.CaptureFixture) -> None:
-    """Logs get few lines: none before ten seconds, then share and rate."""
+@pytest.mark.parametrize(
+    "per_second, seconds, shares", [(10, 100, range(5, 101, 5)), (50, 20, range(10, 101, 10)), (4000, 0.25, [])]
+)
+def test_without_a_terminal_a_line_comes_for_every_tenth(
+    per_second: int, seconds: float, shares: range, capsys: pytest.CaptureFixture
+) -> None:
+    """Logs get a line at the latest after five seconds, one per tenth when it goes faster, none for what is quick."""
     now = [0.0]
     with Progress("hashing", 1000, "rounds", clock=lambda: now[0]) as progress:
-        for second in range(1, 26):
-            now[0] = float(second)
-            progress.move_to(40 * second)
-    assert capsys.readouterr().err.splitlines() == ["hashing: 40 %, 40 rounds/s", "hashing: 80 %, 40 rounds/s"]
+        for step in range(1, int(4 * seconds) + 1):
+            now[0] = step / 4
+            progress.move_to(int(per_second * now[0]))
+    expected = [f"hashing: {share} %, {per_second} rounds/s" for share in shares]
+    assert capsys.readouterr().err.splitlines() == expected
 
 
 def test_on_a_terminal_there_is_a_bar(tmp_path: Path) -> None:

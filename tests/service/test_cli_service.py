@@ -10,6 +10,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
+import requests
 
 from service.cli import main
 from service.client import Client, ServiceProblem
@@ -138,7 +139,7 @@ def test_a_run_goes_from_files_to_verified_bits(lab: Lab, run, tmp_path: Path) -
         lab.client.ledger_key(),
     ]
     code, out, err = run("verify", tmp_path / "bundle.zip", *everything)
-    assert code == 0 and len(out.splitlines()) > 5, err
+    assert code == 0 and len(out.splitlines()) > 5 and "none not made" in out, err
     code, out, _ = run("verify", tmp_path / "bundle.zip", *everything, "--json")
     assert code == 0 and json.loads(out)["verified"] and json.loads(out)["checks"]
 
@@ -163,6 +164,12 @@ def test_a_changed_bundle_or_bits_fail_the_verification(lab: Lab, run, tmp_path:
         "verify", tmp_path / "bundle.zip", "--bits", tmp_path / "wrong.bin", "--bits-salt", tmp_path / "bits-salt.hex"
     )
     assert code == 1 and "bits" in err and "Traceback" not in err
+    code, out, _ = run("verify", tmp_path / "bundle.zip")
+    assert code == 0 and f"{out.count('not checked: ')} not made:" in out and "  - whose key signed\n" in out
+    code, _, err = run("verify", tmp_path / "bundle.zip", "--key", "nonsense")
+    assert code == 2 and "--key: the value is not an Ed25519 verifier key" in err
+    code, _, err = run("verify", tmp_path / "bundle.zip", "--bits-salt", "nonsense")
+    assert code == 2 and "--bits-salt: is neither" in err
     bundle = bytearray((tmp_path / "bundle.zip").read_bytes())
     bundle[len(bundle) // 2] ^= 1
     (tmp_path / "wrong.zip").write_bytes(bundle)
@@ -320,6 +327,15 @@ def test_a_broken_file_is_refused_with_its_name_and_row(lab: Lab, run, tmp_path:
     path.write_text("x,y,a,b\n0,0,1,1\n0,1,7,0\n")
     code, _, err = run("submit", path, "--declaration", lab.declaration("broken"))
     assert code == 2 and str(path) in err and err.count("row 2") == 1 and "Traceback" not in err
+
+
+def test_the_interface_explains_every_request(lab: Lab) -> None:
+    """Each request has a summary and a description, and each of its parameters says what it is."""
+    document = requests.get(f"{lab.url}/openapi.json", timeout=10).json()
+    for path, operations in document["paths"].items():
+        for operation in operations.values():
+            assert operation["summary"] and operation["description"], path
+            assert all(parameter.get("description") for parameter in operation.get("parameters", ())), path
 
 
 def test_tokens_are_listed_and_revoked(lab: Lab, run) -> None:
