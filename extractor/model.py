@@ -23,6 +23,7 @@ SETTING_PAIRS = ((0, 0), (0, 1), (1, 0), (1, 1))
 PLANES = ("t", "x", "y", "a", "b")
 MAXIMUM_ROUNDS = 2**50          # counts stay exact in JSON numbers and in float64
 LEAST_ORDER = 1 + 1e-10         # what the largest run could use is above it
+LEAST_SETTING = 1e-9            # probability of a setting pair in a test round
 MOST_CREDIT = 1e9               # bits per round
 FACTOR_METHODS = ("factor-table", "factor-closed")
 METHODS = FACTOR_METHODS + ("eat-2018", "eat-2019")
@@ -179,7 +180,7 @@ class Settings:
         if len(self.distribution) != 4:
             raise InputError("four probabilities are needed", code="bad-settings", field="/settings/distribution")
         for p in self.distribution:
-            _number(p, "/settings/distribution", 0.0, 1.0, low_open=True)
+            _number(p, "/settings/distribution", LEAST_SETTING, 1.0)
         if abs(math.fsum(self.distribution) - 1.0) > 1e-12:
             raise InputError(f"the four probabilities add up to {math.fsum(self.distribution)!r}, not 1",
                              code="bad-settings", field="/settings/distribution")

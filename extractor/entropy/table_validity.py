@@ -73,9 +73,9 @@ def check_valid(table: ScoreTable, settings: Settings) -> float:
 
 @lru_cache(maxsize=256)
 def _bound(table: ScoreTable, settings: Settings) -> float:
-    worst = -float("inf")
+    bounds: list[float] = []
     for problem in problems(table, settings):
-        worst = max(worst, two_sided_grid.excess_bound(problem, target=0.0).bound)
-        if worst > 0.0:
-            break
-    return worst
+        bounds.append(two_sided_grid.excess_bound(problem, target=0.0).bound)
+        if not bounds[-1] <= 0.0:
+            return float("inf")
+    return max(bounds)

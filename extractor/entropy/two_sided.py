@@ -17,6 +17,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from extractor.errors import Defect
 from extractor.entropy.portable import U, expm1, log, quarter_turn, rotate_towards_diagonal
 
 FLOOR = 1e-9              # smallest eigenvalue of a trial state
@@ -37,6 +38,11 @@ class Problem:
     weights: np.ndarray
     excess: np.ndarray
     e: float
+
+    def __post_init__(self) -> None:
+        finite = np.isfinite(self.weights).all() and np.isfinite(self.excess).all()
+        if not (finite and 0 < self.e <= 1 and (self.weights > 0).all() and abs(self.weights.sum() - 1) < 1e-9):
+            raise Defect("a table's weights or factors are not finite numbers of the right size")
 
     @property
     def largest(self) -> float:

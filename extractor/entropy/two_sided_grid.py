@@ -128,8 +128,7 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
         limit: int = NODE_LIMIT) -> GridBound:
     """Bound on the excess of a table.
 
-    With `target`, stops as soon as the bound is proven to be at most the target, or a strategy above it is met (then
-    the
+    With `target`, stops as soon as the bound is proven to be at most the target, or a strategy above it is met (then the
     bound is infinite). Otherwise stops when the bound is within `tolerance` of the best strategy met. At most about
     `limit` nodes; what is reached by then is returned, sound in any case.
     """
@@ -151,7 +150,7 @@ def excess_bound(problem: Problem, *, target: float | None = None, tolerance: fl
             if target is not None and best > target:
                 return _result(nodes, np.inf)
             bounds = np.max(nodes.upper[corners], axis=0) + error
-            open_cells = bounds > goal
+            open_cells = ~(bounds <= goal)             # what is not shown to be at most the goal stays open, NaN included
             # Where the corners' gap to what their states attain is what is missing, better states help; else smaller
             # cells.
             hopeful = open_cells & (np.max(nodes.attained[corners], axis=0) + error <= goal)

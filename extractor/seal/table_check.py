@@ -26,7 +26,12 @@ STEPS = 12                # ascent steps a corner gets each time it is looked at
 def table_holds(declaration: Mapping[str, Any]) -> bool:
     """True if the table of a declaration document is shown to be valid under every settings distribution it allows."""
     e = declaration["order"] - 1
-    return all(_holds(*case, e) for case in _cases(declaration["settings"], declaration["table"], e))
+    cases = _cases(declaration["settings"], declaration["table"], e)
+    try:
+        return bool(cases) and all(np.isfinite(case).all() for pair in cases for case in pair) and all(
+            _holds(*case, e) for case in cases)
+    except np.linalg.LinAlgError:             # numbers no eigenvalue can be found for are no proof
+        return False
 
 
 def _cases(settings: Mapping[str, Any], table: Mapping[str, Any], e: float) -> list[tuple[np.ndarray, np.ndarray]]:
@@ -58,7 +63,7 @@ def _distributions(p: np.ndarray, bias: float) -> list[np.ndarray]:
 
 
 def _holds(weights: np.ndarray, excess: np.ndarray, e: float) -> bool:
-    log_states: dict[tuple[int, int], np.ndarray] = {}            # ln rho0 at each corner, kept for its next visit
+    log_states: dict[tuple[int, int], np.ndarray] = {}            # ln rho0 at each corner, kept; new ones start mixed
     bounds: dict[tuple[int, int], float] = {}
     size = 2 ** (DEPTH - 4)
     cells = [(i, j) for i in range(0, 2**DEPTH, size) for j in range(0, 2**DEPTH, size)]
@@ -69,20 +74,18 @@ def _holds(weights: np.ndarray, excess: np.ndarray, e: float) -> bool:
             angles = np.array(some).T * (math.pi / 2**DEPTH)
             logs = np.array([log_states.get(place, np.zeros((4, 4))) for place in some])
             logs, upper, reached = _climb(weights, excess, e, angles, logs)
-            if reached > ROUNDING:
+            if not reached <= ROUNDING:
                 return False                                      # a strategy that exceeds 1 was met
             for place, log_state, bound in zip(some, logs, upper):
                 log_states[place], bounds[place] = log_state, min(bound, bounds.get(place, math.inf))
         between = excess_between(weights, excess, e, size)
         between += excess_between(weights.T, excess.transpose(1, 0, 3, 2), e, size)
         still_open = [(i, j) for i, j in cells
-                      if max(bounds[i + di, j + dj] for di in (0, size) for dj in (0, size)) + between + ROUNDING > 0]
+                      if not max(bounds[i + di, j + dj] for di in (0, size) for dj in (0, size)) + between + ROUNDING <= 0]
         if size == 1 or len(still_open) > 40_000:
             return False
         half, cells = size // 2, []
         for i, j in still_open:
-            for di, dj in itertools.product((0, half, size), repeat=2):
-                log_states.setdefault((i + di, j + dj), log_states[i, j])
             cells += [(i, j), (i + half, j), (i, j + half), (i + half, j + half)]
         size = half
     return True

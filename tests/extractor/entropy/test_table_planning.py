@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
 from extractor import documents, pipeline
 from extractor.bell.rigs import Rig, optimal_rig, simulate_many, simulate_tally
-from extractor.entropy import behaviours
+from extractor.entropy import behaviours, bound, planning, table_making
 from extractor.errors import InputError
-from extractor.model import Convention, Settings, Tally
+from extractor.model import Convention, Declaration, Settings, Tally
 from extractor.seal import canonical, table_check
 from tests.published.counts import DELFT_2015, VIENNA_2015, tally_of
 
@@ -110,3 +112,19 @@ def test_losses_are_capped():
     plan = pipeline.plan(**pipeline.expect(model=optimal_rig(0.8, 0.01)), rounds=10**7, soundness=1e-6,
             method="factor-table", order=1.002)
     assert min(plan.table["test"]) > -0.05 * 10**7
+
+
+@pytest.mark.parametrize("order", [1.3, 1.6, 2.0])
+def test_the_second_check_agrees_at_large_orders(order):
+    """Tables made for orders far from 1 pass the auditor's check too, and are refused by both with a little more credit."""
+    made = table_making.make_table(planning._of_score(0.84, Convention()), Settings(), 1000, 0.1, order)
+    for extra, holds in ((0.0, True), (0.01, False)):
+        table = replace(made.table, test=tuple(c + extra for c in made.table.test))
+        declaration = Declaration(rig="Wren bench", rounds=1000, method="factor-table", soundness=0.1, output_rule="credit", output_bits=2000,
+                                  order=order, table=table)
+        assert table_check.table_holds(documents.declaration_document(declaration)) == holds
+        if holds:
+            bound.check_declaration(declaration)
+        else:
+            with pytest.raises(InputError):
+                bound.check_declaration(declaration)

@@ -11,7 +11,7 @@ from scipy import optimize
 
 from extractor.entropy import planning, table_making, table_search, table_validity, two_sided, two_sided_grid
 from extractor.entropy.two_sided import Problem
-from extractor.errors import InputError
+from extractor.errors import Defect, InputError
 from extractor.model import ScoreTable, Settings
 from tests.extractor.entropy import attacks
 
@@ -247,3 +247,15 @@ def test_the_search_alone_is_not_trusted():
     factors, gain = search.fit(1e-2)
     (problem,) = search.layout.problems(factors, 1e-2)
     assert two_sided_grid.excess_bound(problem, target=0.0).bound == np.inf and gain > 0
+
+
+@pytest.mark.parametrize("wrong", [float("nan"), float("inf")])
+def test_numbers_that_are_none_prove_nothing(wrong):
+    """A factor or weight that is not a finite number is a defect, never a valid table."""
+    for place in ((0, 0, 0, 0), (1, 1, 0, 0)):
+        excess = np.full((2, 2, 2, 2), -0.5)
+        excess[place] = wrong
+        with pytest.raises(Defect):
+            Problem(np.full((2, 2), 0.25), excess, 0.5)
+    with pytest.raises(Defect):
+        Problem(np.array([[0.25, 0.25], [0.25, wrong]]), np.full((2, 2, 2, 2), -0.5), 0.5)
