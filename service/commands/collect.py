@@ -49,7 +49,8 @@ def collect(args: argparse.Namespace) -> int:
     run = client.run(args.run_id)
     if run["waiting_for"] == "seed":
         raise InputError(
-            f"the run waits for its seed; there is nothing to collect before it has come: {seed_command(args, run['id'])}",
+            "the run waits for its seed; there is nothing to collect before it has come: "
+            + seed_command(args, run["id"]),
             code="waits-for-seed",
         )
     if run["state"] not in FINAL_STATES:

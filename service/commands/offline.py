@@ -103,10 +103,11 @@ def certify(args: argparse.Namespace) -> int:
 
     declaration = read_declaration(args.declaration)
     if args.seed and declaration.seed_source == "system":
-        note("mind: the declaration says that the seed is drawn from the operating system, but --seed gives another one")
+        note("mind: the declaration says that the seed is drawn from the operating system,")
+        note("but --seed gives another one")
     elif not args.seed and declaration.seed_source == "upload":
-        note("mind: the declaration says that you bring the seed, but no --seed is given: it is drawn from the operating")
-        note("system if the run is certified")
+        note("mind: the declaration says that you bring the seed, but no --seed is given:")
+        note("it is drawn from the operating system if the run is certified")
     out = Path(args.out)
     for name in ("certificate.json", "bits.bin"):
         if (out / name).exists():

@@ -220,8 +220,8 @@ def plan(args: argparse.Namespace) -> int:
             refusals.append({"method": method, "code": fault.code, "detail": str(fault)})
     document = {"score": common["score"], "wanted_length": args.length, "plans": plans, "not_applicable": refusals}
     # One method asked for: its plan is the result. Several: a list of plans.
-    emit(args, document["plans"][0] | {"wanted_length": args.length} if args.method else document,
-            _plan_lines(args, document))
+    result = document["plans"][0] | {"wanted_length": args.length} if args.method else document
+    emit(args, result, _plan_lines(args, document))
     return DONE
 
 

@@ -125,7 +125,9 @@ def reading_of(args: argparse.Namespace, calibrated: Reading | None = None) -> R
     given = [name for name in READING_OPTIONS if getattr(args, name) is not None]
     if getattr(args, "declaration", None):
         if given:
-            raise InputError(f"{option_of(given[0])} is fixed by the declaration; give one or the other", code="bad-usage")
+            raise InputError(
+                f"{option_of(given[0])} is fixed by the declaration; give one or the other", code="bad-usage"
+            )
         declaration = read_declaration(args.declaration)
         return Reading(declaration.settings, declaration.convention, declaration.no_click)
 

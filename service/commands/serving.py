@@ -180,7 +180,8 @@ def _store(settings: Any, *, make: bool = False) -> Iterator[Any]:
 
     if not make and not settings.database_path.exists():
         raise InputError(
-            f"no service data in {settings.data}; start it with: bellassay serve --data {shlex.quote(str(settings.data))}",
+            f"no service data in {settings.data}; "
+            f"start it with: bellassay serve --data {shlex.quote(str(settings.data))}",
             code="no-service-data",
         )
     store = open_store(settings)

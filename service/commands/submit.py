@@ -132,7 +132,7 @@ def _given_run(args: argparse.Namespace, client: Client) -> str:
 
 
 def _is_file(declaration: str) -> bool:
-    """Whether --declaration names a file rather than an id. Errors raised: InputError if it is a file that is missing."""
+    """Whether --declaration names a file rather than an id. Errors raised: InputError if the file is missing."""
     if os.path.exists(declaration):
         return True
     if "/" in declaration or declaration.endswith(".json"):
@@ -181,9 +181,10 @@ def _open(args: argparse.Namespace, client: Client) -> str:
         state.keep(declaration=recorded["id"], opening=str(uuid.uuid4()), run=None)
         note(f"declaration recorded: {recorded['id']} at {recorded['time']}")
         if new:
-            note("CAUTION: it was recorded only now. Rounds that exist already were not covered by an earlier record:")
-            note("nobody can tell whether the declaration was chosen after looking at them. Before the next run, record")
-            note("the declaration first (bellassay declare ... --post), then take the rounds.")
+            note("CAUTION: it was recorded only now. Rounds that exist already were not covered by")
+            note("an earlier record: nobody can tell whether the declaration was chosen after")
+            note("looking at them. Next time record it first (bellassay declare ... --post), then")
+            note("take the rounds.")
     else:
         recorded = client.declaration(args.declaration)
         note(f"declaration recorded: {recorded['id']} at {recorded['time']}")
@@ -253,8 +254,8 @@ def _send_segments(args: argparse.Namespace, client: Client, run: dict) -> dict:
     there = {segment["segment"]: segment for segment in client.segments(run["id"])["segments"]}
     if extra := sorted(k for k in there if k > len(args.files)):
         raise InputError(
-            f"the run has a segment {extra[0]} already, but only {several(len(args.files), 'file')} came with the command; "
-            "give all files of the run, in order",
+            f"the run has a segment {extra[0]} already, but only {several(len(args.files), 'file')} came with the "
+            "command; give all files of the run, in order",
             code="segments-differ",
         )
     sizes = [os.path.getsize(path) for path in args.files]

@@ -88,7 +88,10 @@ def _lines(total: Tally, result: Score, document: dict[str, Any], reading: Readi
         f"{side} counted as {value}" for side, value in zip("ab", reading.no_click) if value is not None
     )
     lines += [
-        ("no-clicks", f"{grouped(on_a)} on side a, {grouped(on_b)} on side b" + (f" ({counted_as})" if counted_as else "")),
+        (
+            "no-clicks",
+            f"{grouped(on_a)} on side a, {grouped(on_b)} on side b" + (f" ({counted_as})" if counted_as else ""),
+        ),
         ("read with", _reading_text(reading)),
     ]
     text = rows([*lines, ("digest of rounds", document["records_digest"])])

@@ -72,7 +72,9 @@ def test_a_declaration_inherits_how_its_calibration_was_read(calibration: Path, 
     "option", [["--minus", "11"], ["--flip"], ["--no-click-a", "0"], ["--no-click-b", "0"], ["--bias", "0"],
                ["--test-probability", "0.5"], ["--generation", "01"], ["--distribution", "0.1,0.2,0.3,0.4"]],
 )  # fmt: skip
-def test_an_option_that_contradicts_the_calibration_is_refused(option: list, calibration: Path, tmp_path, capsys) -> None:
+def test_an_option_that_contradicts_the_calibration_is_refused(
+    option: list, calibration: Path, tmp_path: Path, capsys
+) -> None:
     """A calibration read in one way says nothing about rounds read in another."""
     words = ["--rounds", "1e6", "--method", "factor-closed", "--soundness", "1e-6", "--calibration", calibration]
     for command in (["plan"], ["declare", "--rig", "r", "--out", tmp_path / "d.json"]):
