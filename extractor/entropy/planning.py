@@ -136,8 +136,9 @@ def plan(*, rounds: int, score: float, soundness: float, method: str, settings: 
         reliable_draft = draft if method in FACTOR_METHODS else _checked_draft(common, output_rule, order, confidence, None)[0]
         reliable = _available(reliable_draft, _expected(reliable_draft, score, confidence))
     with exactly():
-        limit = down(von_neumann(number(score))) if made is None else table_making.limit_rate(
-            behaviour, settings)
+        # The searched limit is read off slightly below it; a certified rate above it only shows that.
+        limit = down(von_neumann(number(score))) if made is None else max(
+            table_making.limit_rate(behaviour, settings), gain / rounds)
     raw = 2 * rounds
     seed = raw + length - 1 if length else 0
     inputs = math.ceil(rounds * _settings_entropy(settings))

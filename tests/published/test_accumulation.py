@@ -9,7 +9,7 @@ import pytest
 
 from extractor.entropy import accumulation, planning, search
 from extractor.entropy.numerics import exactly, log2, number
-from extractor.model import METHODS, Settings
+from extractor.model import Settings
 
 
 def test_the_2018_experiment_is_reproduced():
@@ -85,9 +85,9 @@ def test_factor_closed_reaches_the_reference_figures(rounds, score, soundness, l
 
 @pytest.mark.parametrize("score", [0.7501, 0.752, 0.77, 0.80, 0.82, 0.85])
 @pytest.mark.parametrize("gamma", [1.0, 0.1, 0.001])
-def test_no_method_exceeds_the_one_sided_rate(score, gamma):
-    """None of the methods certifies more than n times the one-sided von Neumann entropy, at any size."""
+def test_no_one_sided_method_exceeds_the_one_sided_rate(score, gamma):
+    """No method that credits one outcome certifies more than n times the one-sided von Neumann entropy, at any size."""
     for rounds in (10**3, 10**6, 10**10, 10**14):
-        for method in METHODS:
+        for method in ("factor-closed", "eat-2018", "eat-2019"):
             plan = planning.plan(rounds=rounds, score=score, soundness=1e-3, method=method, settings=Settings(gamma))
             assert plan.certified_length <= plan.limit_rate * rounds

@@ -95,7 +95,7 @@ def test_nothing_to_certify_is_said_before_the_run():
         planning.declare(rig="Wren bench", rounds=1000, method="eat-2018", soundness=1e-9, score=0.8)
     for method in METHODS:
         with pytest.raises(InputError, match="probably be refused"):
-            planning.declare(rig="Wren bench", rounds=10**7, method=method, soundness=1e-9, score=0.8, output_bits=4 * 10**6)
+            planning.declare(rig="Wren bench", rounds=10**7, method=method, soundness=1e-9, score=0.8, output_bits=99 * 10**5)
 
 
 def test_score_of_a_calibration_weighs_settings_equally():

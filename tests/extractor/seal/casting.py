@@ -198,7 +198,7 @@ def refused() -> Run:
 
 @cache
 def public() -> Run:
-    return run(declared(disclosure="public", output_bits=400), (1500, 1500))
+    return run(declared(disclosure="public", output_bits=300), (1500, 1500))
 
 
 @cache

@@ -251,7 +251,7 @@ def test_a_bundle_without_the_result_entry_is_refused() -> None:
 @pytest.mark.parametrize("joined", [True, False])
 def test_rounds_that_were_not_sealed_are_refused(disclosure, joined) -> None:
     """A lab that owns the key seals the segments of one run and certifies another one: the seal is held against the rounds handed in."""
-    changes = {} if disclosure == "confidential" else {"disclosure": "public", "output_bits": 400}
+    changes = {} if disclosure == "confidential" else {"disclosure": "public", "output_bits": 300}
     sealed = casting.run(casting.declared(**changes), (1400, 1600), seed=1)
     other = casting.run(casting.declared(**changes), (1400, 1600), seed=2)
     forged = replace(other, records={"segments": sealed.records["segments"], "planes_digest": other.records["planes_digest"]})
