@@ -78,9 +78,11 @@ def batches_of(files: Iterable[tuple[BinaryIO, str]], rules: RoundRules) -> Iter
                 digest.update(batch)
                 yield batch
             if opened.rounds >= TELLING_ROUNDS:
-                earlier = known.setdefault(digest.hexdigest(), name)
-                if earlier is not name:
+                rounds = digest.hexdigest()
+                if rounds in known:
+                    earlier = "itself, given before" if known[rounds] == name else known[rounds]
                     raise InputError(f"holds the same rounds as {earlier}; no round counts twice", code="repeated-rounds", file=name)
+                known[rounds] = name
             if last is not None and opened.first_round is not None and opened.first_round != last + 1:
                 code = "missing-round" if opened.first_round > last + 1 else "repeated-round"
                 raise InputError(f"starts with round {opened.first_round}, the file before it ended with round {last}",

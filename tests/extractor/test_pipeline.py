@@ -37,6 +37,9 @@ def test_no_round_counts_twice():
     with pytest.raises(InputError, match="same rounds as write_npz-1") as caught:
         list(pipeline.batches_of([first, file_of(write_npz, 700, 2), again], RoundRules()))
     assert caught.value.code == "repeated-rounds" and caught.value.file == "write_csv-1"
+    name = "twice.npz"          # one and the same text, as when a path is typed twice
+    with pytest.raises(InputError, match="itself, given before"):
+        list(pipeline.batches_of([(first[0], name), (file_of(write_npz, 5000, 1)[0], name)], RoundRules()))
     assert sum(b.rounds for b in pipeline.batches_of([file_of(write_npz, 9, 1), file_of(write_npz, 9, 1)], RoundRules())) == 18
 
 
